@@ -1,0 +1,1 @@
+"""Floor 1: arrays in, arrays out."""

@@ -1,0 +1,1 @@
+"""Floor 7: pure rendering, from results to text and pictures."""
