@@ -212,7 +212,7 @@ def damped_from_undamped(undamped_frequency_hz: float, decay_rate_per_s: Array) 
 def damped_from_undamped(undamped_frequency_hz: float | Array, decay_rate_per_s: float | Array) -> float | Array:
     """Damped frequency sqrt(omega_0^2 - alpha^2)/(2 pi), in Hz."""
     q = q_from_undamped(undamped_frequency_hz, decay_rate_per_s)
-    return cycles_from_q(q) * decay_rate_per_s / math.pi
+    return cycles_from_q(q) * _positive("decay rate (1/s)", decay_rate_per_s) / math.pi
 
 
 # ---- the response of a driven mode ----

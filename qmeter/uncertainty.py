@@ -27,7 +27,7 @@ UNKNOWN = "?"
 """Shown where no uncertainty could be stated."""
 
 _DIGITS_WITHOUT_U95 = 3
-_DIGITS_WITH_ZERO_U95 = 10
+_DIGITS_WITH_U95_OF_ZERO = 10
 _SLACK = 1e-9  # keeps truncation from turning 4 - 1e-15 degrees of freedom into 3
 
 
@@ -159,7 +159,8 @@ def covariance_of_means(readings: Array) -> Array:
     count = readings.shape[0]
     if count < 2:
         raise OutOfRangeError(f"A covariance needs at least two readings and {count} was given.")
-    return np.atleast_2d(np.cov(readings, rowvar=False)) / count
+    covariance: Array = np.atleast_2d(np.cov(readings, rowvar=False)) / count
+    return covariance
 
 
 def covariance_from_correlation(u: Sequence[float] | Array, correlation: Array) -> Array:
@@ -258,7 +259,7 @@ def format_value_u95(value: float, u95: float | None) -> tuple[str, str]:
     if u95 is None or not math.isfinite(u95):
         return _text(_significant(exact, _DIGITS_WITHOUT_U95), exact), UNKNOWN
     if u95 == 0.0:
-        return _text(_significant(exact, _DIGITS_WITH_ZERO_U95).normalize(), exact), "0"
+        return _text(_significant(exact, _DIGITS_WITH_U95_OF_ZERO).normalize(), exact), "0"
     rounded = round_u95(abs(u95))
     place = rounded.as_tuple().exponent
     assert isinstance(place, int)
