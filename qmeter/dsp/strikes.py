@@ -94,11 +94,16 @@ def find_strikes(samples: FloatArray, rate: float) -> tuple[StrikeSpan, ...]:
 
 
 def _band_edges(count: int) -> NDArray[np.int64]:
-    """First bin of each band: single bins at the bottom, a sixth wider each further up (`count` bins in all)."""
-    edges = [0]
+    """First bin of each band: single bins at the bottom, a fifth of their frequency wide further up (`count` bins in all).
+
+    The bin at 0 Hz is left out: drift and rumble; the lowest modes reach the next bin (Hann's lobe is two bins wide).
+    """
+    edges = [1]
     while edges[-1] < count:
         edges.append(edges[-1] + max(1, round(edges[-1] / 5)))
     edges = edges[:-1]
+    if len(edges) > 2 and count - edges[-1] < edges[-1] // 5 + 1:
+        edges.pop()  # the last band takes a short remainder, which holds the real-valued bin at half the rate
     return np.array(edges, dtype=np.int64)
 
 
@@ -106,9 +111,9 @@ def _band_energies(x: FloatArray, rate: float, largest: float) -> _Frames:
     """Hann-weighted spectra of half-overlapping frames summed into bands; single precision does (140 dB)."""
     hop = max(int(scipy.fft.next_fast_len(max(int(rate * HOP_S), 8), real=True)), 8)
     length = 2 * hop
-    count = max(-(-x.size // hop) - 1, 1)
+    count = max(x.size // hop - 1, 1)  # a short remainder is left out: padding it would make an edge
     padded = np.zeros((count + 1) * hop, dtype=np.float32)
-    padded[: x.size] = x
+    padded[: x.size] = x[: padded.size]
     blocks = padded.reshape(-1, hop)
     window = np.hanning(length + 1)[:-1].astype(np.float32)
     edges = _band_edges(hop + 1)
@@ -158,7 +163,7 @@ def _events(frames: _Frames) -> list[int]:
     prior = widest[lead - 1 - PRIOR_FRAMES : lead - 1 - PRIOR_FRAMES + count]  # frames t-9 .. t-2
     sums = np.cumsum(np.log(extended), axis=0)
     past = np.exp((sums[PAST_FRAMES : PAST_FRAMES + count] - sums[:count]) / PAST_FRAMES)  # frames t-41 .. t-2
-    threshold = 1.0 + 15.0 / np.sqrt(bins)
+    threshold = 1.0 + 20.0 * bins**-0.6
     rises = np.any(energy > threshold * np.maximum(prior, 1.5 * past), axis=1)
     hot = np.flatnonzero(rises)
     if hot.size == 0:
@@ -245,7 +250,7 @@ def _quiet(rate: float, frames: _Frames, onset: int, before: int | None) -> tupl
     if last - first < 8:
         return (0, quiet_to) if before is None else (quiet_to, quiet_to)
     smooth = _smoothed(frames.energy[first:last])
-    limit = frames.noise * (1.0 + 2.5 / np.sqrt(frames.bins))
+    limit = frames.noise * (1.0 + 5.0 / np.sqrt(frames.bins))
     loud = np.flatnonzero(np.any(smooth > limit, axis=1))
     if loud.size == 0:
         start = first * frames.hop
@@ -261,4 +266,4 @@ def _meets_noise(frames: _Frames, noise: FloatArray, onset: int, end: int) -> bo
     last = max(end // frames.hop - 1, 1)
     first = max(last - 8, min(onset // frames.hop + 1, last - 1))
     level = frames.energy[first:last].mean(axis=0)
-    return bool(np.all(level < noise * (1.0 + 4.0 / np.sqrt(frames.bins))))
+    return bool(np.all(level < noise * (1.0 + 5.0 / np.sqrt(frames.bins))))
