@@ -82,7 +82,7 @@ class Recording:
         doubts: tuple[SourceDoubt, ...] = (),
         starts_at_s: float = 0.0,
     ) -> None:
-        name = origin.file if origin is not None else "The recording"
+        name = _name(origin)
         kept = _as_frames_by_channels(samples, name)
         checked_rate = check_rate(rate, name)
         _check_values(kept, checked_rate, name)
@@ -117,7 +117,7 @@ class Recording:
     @property
     def name(self) -> str:
         """What to call it in a sentence."""
-        return self.origin.file if self.origin is not None else "The recording"
+        return _name(self.origin)
 
     def channel(self, number: int) -> npt.NDArray[np.float64]:
         """Channel `number` (the first is 1) as a contiguous, read-only float64 array of shape (frames,).
@@ -142,6 +142,12 @@ class Recording:
         if (first, stop) == (0, self.frames):
             return self
         return dataclasses.replace(self, samples=self.samples[first:stop], starts_at_s=self.starts_at_s + first / self.rate)
+
+
+def _name(origin: Origin | None) -> str:
+    if origin is None:
+        return "The recording"
+    return "standard input" if origin.file == "-" else origin.file
 
 
 def check_rate(rate: float, name: str) -> float:
