@@ -147,7 +147,7 @@ class Recording:
 def _name(origin: Origin | None) -> str:
     if origin is None:
         return "The recording"
-    return "standard input" if origin.file == "-" else origin.file
+    return "Standard input" if origin.file == "-" else origin.file
 
 
 def check_rate(rate: float, name: str) -> float:

@@ -155,7 +155,7 @@ def _decode_opened(opened: Any, name: str, file_bytes: int, from_s: float | None
     if wanted is not None and wanted * opened.channels > MOST_SAMPLES:
         raise too_long(name, wanted * opened.channels)
     sink = Sink(name, file_bytes, opened.channels, np.float64 if opened.subtype in _NEEDS_FLOAT64 else np.float32)
-    skipped, trouble = _skip_to(opened, first)
+    skipped, trouble = _skip_to(opened, first, seeks=opened.format in _SEEKS_EXACTLY and not streamed)
     if skipped == first and trouble is None:
         trouble = _fill(opened, sink, wanted)
     if streamed and (wanted is None or sink.frames < wanted):
@@ -172,18 +172,18 @@ def _decode_opened(opened: Any, name: str, file_bytes: int, from_s: float | None
     return Decoded(sink.finish(), rate, first, opened.format, opened.subtype, bits, bits is None, cut_short)
 
 
-def _skip_to(opened: Any, first: int) -> tuple[int, str | None]:
+def _skip_to(opened: Any, first: int, *, seeks: bool) -> tuple[int, str | None]:
     """Go to frame `first`; how far it got, and what stopped it."""
     import soundfile
 
     if first == 0:
         return 0, None
-    if opened.format in _SEEKS_EXACTLY:
+    if seeks:
         try:
             return int(opened.seek(first)), None
         except (soundfile.SoundFileError, RuntimeError, OSError) as error:
             return 0, _reason(error)
-    # OGG and MP3 seek by estimate; decoding up to the place is exact.
+    # OGG and MP3 seek by estimate, FLAC of unknown length not at all; decoding up to the place is exact.
     scratch = np.empty((_BLOCK_SAMPLES // opened.channels, opened.channels), dtype=np.float32)
     skipped = 0
     while skipped < first:

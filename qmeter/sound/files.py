@@ -39,12 +39,12 @@ class Recording(pure.Recording):
         Memory: the samples as float32 (float64 where they have more than 24 bits), about 1 MB beside them, and never more than 512 times
         the file's size or 64 MB, whichever is more.
 
-        Errors: RecordingError, whose code is one of truncated, missing, folder, no-permission, not-a-file, empty, text, unknown-format, needs-aac,
-        unreadable, no-samples, bad-rate, too-many-channels, too-long, expands-too-far, outside, not-finite, too-large.
+        Errors: RecordingError, whose code is one of missing, folder, no-permission, not-a-file, empty, text, unknown-format, needs-aac,
+        truncated, unreadable, no-samples, bad-rate, too-many-channels, too-long, expands-too-far, outside, not-finite, too-large.
         UsageError for a part that cannot be meant.
         """
         given = shown_name(path)
-        name = "standard input" if given == "-" else given
+        name = "Standard input" if given == "-" else given
         with _opened(path, name) as file:
             digest, size, head = _digest(file, name)
             container = _recognise(head, size, name)
@@ -206,7 +206,7 @@ def _doubts(decoded: Decoded, promise: headers.SoundChunk | None, name: str) -> 
             )
         )
     if decoded.cut_short:
-        doubts.append(SourceDoubt("truncated", f"Of {name}, {decoded.cut_short} Copy it again if the rest matters."))
+        doubts.append(SourceDoubt("truncated", f"{name} is cut short or damaged: {decoded.cut_short} Copy it again if the rest matters."))
     elif promise is not None and promise.promised_bytes is not None and promise.promised_bytes > promise.present_bytes + 1:
         doubts.append(
             SourceDoubt(

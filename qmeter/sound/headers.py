@@ -48,7 +48,7 @@ def container_of(head: bytes) -> str | None:
     for magic, name in ((_W64_RIFF, "W64"), (b"caff", "CAF"), (b"fLaC", "FLAC"), (b"OggS", "OGG"), (b"ID3", "MP3")):
         if head.startswith(magic):
             return name
-    if len(head) > 1 and head[0] == 0xFF:
+    if len(head) > 1 and head[0] == 0xFF and head[1] != 0xFE:  # FF FE would be MPEG layer I with a check sum, or text in UTF-16: text
         if head[1] & 0xF6 == 0xF0:  # 12 bits of sync, layer 00: AAC in ADTS frames (ISO/IEC 13818-7, 6.2)
             return "ADTS"
         if head[1] & 0xE0 == 0xE0 and head[1] & 0x06:  # 11 bits of sync, a layer: MPEG audio (ISO/IEC 11172-3, 2.4.1.3)
