@@ -8,7 +8,7 @@ from __future__ import annotations
 import math
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
-from decimal import ROUND_CEILING, ROUND_HALF_EVEN, Decimal
+from decimal import ROUND_CEILING, ROUND_HALF_EVEN, Context, Decimal
 from functools import lru_cache
 from typing import TYPE_CHECKING
 
@@ -263,7 +263,8 @@ def format_value_u95(value: float, u95: float | None) -> tuple[str, str]:
     rounded = round_u95(abs(u95))
     place = rounded.as_tuple().exponent
     assert isinstance(place, int)
-    shown = exact.quantize(Decimal(1).scaleb(place), rounding=ROUND_HALF_EVEN)
+    # the usual 28 digits would not do for 1e20 with a u95 of 1e-20
+    shown = exact.quantize(Decimal(1).scaleb(place), rounding=ROUND_HALF_EVEN, context=Context(prec=700))
     larger = max(abs(shown), rounded)
     return _text(shown, larger), _text(rounded, larger)
 
