@@ -1,8 +1,8 @@
 """Which modes of several strikes are one mode: a one-to-one assignment of each strike to the list that the strikes agree on.
 
 Frequencies may differ by their joint u95 and by a drift (support, temperature, level of the tap), decay rates by theirs and by a factor.
-The assignment of a whole strike at once (H. W. Kuhn, "The Hungarian method for the assignment problem", 1955) keeps the two halves of a
-close pair apart when both have drifted, where taking the nearest first would not.
+A whole strike is assigned at once, at the least total cost: that keeps the two halves of a close pair apart when both have drifted,
+where taking the nearest first would not.
 """
 
 from __future__ import annotations
@@ -10,6 +10,7 @@ from __future__ import annotations
 import math
 from collections.abc import Sequence
 from dataclasses import dataclass
+from statistics import median
 
 import numpy as np
 import numpy.typing as npt
@@ -44,6 +45,7 @@ def match(readings: Sequence[Sequence[Mode]], mountings: Sequence[int]) -> list[
     `readings`: the modes of each strike; `mountings`: the number of each strike's mounting. Starts from the strike with the most modes;
     then each strike is assigned again to what all the others agree on, so that the order of the strikes does not matter much.
     """
+    readings = [sorted(modes, key=lambda mode: mode.damped_frequency_hz) for modes in readings]
     order = sorted(range(len(readings)), key=lambda strike: -len(readings[strike]))
     groups: list[Group] = []
     for strike in order:
@@ -74,49 +76,65 @@ def _assign(groups: list[Group], strike: int, modes: Sequence[Mode], mountings: 
 def _costs(groups: Sequence[Group], strike: int, modes: Sequence[Mode], mountings: Sequence[int]) -> Array:
     """(modes, groups): squared distance in units of what is allowed, 1 in frequency and a half in decay; infinite beyond it."""
     frequency, decay, u_f, u_a = _numbers(modes)
+    middle = np.array([_centre(group, mountings[strike], mountings) for group in groups]).T
     own = np.array([any(mountings[other] == mountings[strike] for other in group.modes) for group in groups])
-    centre = np.array([_centre(group, mountings[strike], mountings) for group in groups])
-    width = np.maximum(decay[:, None], centre[None, :, 1]) / math.pi
+    width = np.maximum(decay[:, None], middle[1]) / math.pi
     drift_widths, drift_relative, factor = (np.where(own, *pair)[None, :] for pair in (_DRIFT_WIDTHS, _DRIFT_OF_FREQUENCY, _DECAY_FACTOR))
-    joint_f = 2.0 * np.minimum(np.hypot(u_f[:, None], centre[None, :, 2]), 0.5 * _WIDEST_U95_WIDTHS * width)
-    allowed_f = joint_f + np.maximum(drift_widths * width, drift_relative * centre[None, :, 0])
-    joint_a = 2.0 * np.hypot(u_a[:, None] / decay[:, None], centre[None, :, 3] / centre[None, :, 1])
+    joint_f = 2.0 * np.minimum(np.hypot(u_f[:, None], middle[2]), 0.5 * _WIDEST_U95_WIDTHS * width)
+    allowed_f = joint_f + np.maximum(drift_widths * width, drift_relative * middle[0])
+    joint_a = 2.0 * np.hypot(u_a[:, None] / decay[:, None], middle[3] / middle[1])
     allowed_a = np.minimum(joint_a, 1.0) + np.log(factor)
-    away_f = np.abs(frequency[:, None] - centre[None, :, 0]) / allowed_f
-    away_a = np.abs(np.log(decay[:, None] / centre[None, :, 1])) / allowed_a
+    away_f = np.abs(frequency[:, None] - middle[0]) / allowed_f
+    away_a = np.abs(np.log(decay[:, None] / middle[1])) / allowed_a
     return np.where((away_f <= 1.0) & (away_a <= 1.0), away_f**2 + 0.5 * away_a**2, np.inf)
 
 
-def _numbers(modes: Sequence[Mode]) -> tuple[Array, Array, Array, Array]:
-    """Frequency, decay rate and their standard uncertainties from fit and model; of no use beyond matching."""
-    frequency = np.array([mode.damped_frequency_hz for mode in modes])
-    decay = np.array([mode.amplitude_decay_rate_per_s for mode in modes])
-    parts = [[mode.budget[name] for name in ("fit", "model") if name in mode.budget] for mode in modes]
-    u_f = np.sqrt([sum(part.frequency_variance for part in some) for some in parts])
-    u_a = np.sqrt([sum(part.decay_variance for part in some) for some in parts])
-    return frequency, decay, u_f, u_a
+def _numbers(modes: Sequence[Mode]) -> Array:
+    """(4, modes): frequency, decay rate, and their standard uncertainties from fit and model."""
+    rows = []
+    for mode in modes:
+        parts = [mode.budget[name] for name in ("fit", "model") if name in mode.budget]
+        u_f = math.sqrt(sum(part.frequency_variance for part in parts))
+        u_a = math.sqrt(sum(part.decay_variance for part in parts))
+        rows.append((mode.damped_frequency_hz, mode.amplitude_decay_rate_per_s, u_f, u_a))
+    return np.array(rows).reshape(-1, 4).T
 
 
-def _centre(group: Group, mounting: int, mountings: Sequence[int]) -> tuple[float, float, float, float]:
-    """Where a group lies: the medians over its strikes in this mounting, or over all when it has none there."""
-    near = [mode for strike, mode in group.modes.items() if mountings[strike] == mounting] or list(group.modes.values())
-    frequency, decay, u_f, u_a = (np.median(number) for number in _numbers(near))
-    return float(frequency), float(decay), float(u_f), float(u_a)
+def _middle(modes: Sequence[Mode]) -> list[float]:
+    """Medians over several readings of one mode: frequency, decay rate, and their standard uncertainties."""
+    return [median(row) for row in _numbers(modes).tolist()]
+
+
+def _centre(group: Group, mounting: int, mountings: Sequence[int]) -> list[float]:
+    """Where a group lies: its middle over the strikes in this mounting, or over all when it has none there."""
+    return _middle([mode for strike, mode in group.modes.items() if mountings[strike] == mounting] or list(group.modes.values()))
 
 
 def _best(cost: Array) -> list[tuple[int, int]]:
-    """Pairs (row, column) of least total cost, where each row and column may also stay alone at `_UNMATCHED`."""
-    from scipy.optimize import linear_sum_assignment
+    """Pairs (row, column) of least total cost, where each row and column may also stay alone at `_UNMATCHED`.
 
-    rows, columns = cost.shape
-    alone = np.full((rows + columns, rows + columns), 1e6)
-    alone[:rows, :columns] = np.where(np.isfinite(cost), cost, 1e6)
-    alone[:rows, columns:][np.diag_indices(rows)] = _UNMATCHED
-    alone[rows:, :columns][np.diag_indices(columns)] = _UNMATCHED
-    alone[rows:, columns:] = 0.0
-    return [
-        (int(r), int(c)) for r, c in zip(*linear_sum_assignment(alone), strict=True) if r < rows and c < columns and np.isfinite(cost[r, c])
-    ]
+    Exact: rows in order of frequency, and of what went before only the taken columns that later rows can still reach matter, which in a
+    spectrum are few.
+    """
+    partners = [np.flatnonzero(np.isfinite(row)).tolist() for row in cost]
+    last = {column: row for row, columns in enumerate(partners) for column in columns}
+    states: dict[frozenset[int], tuple[float, tuple[tuple[int, int], ...]]] = {frozenset(): (0.0, ())}
+    for row, columns in enumerate(partners):
+        following: dict[frozenset[int], tuple[float, tuple[tuple[int, int], ...]]] = {}
+        for taken, (total, pairs) in states.items():
+            moves = [(total, taken, pairs)]
+            # a match saves both its row and its column from staying alone
+            moves += [
+                (total + float(cost[row, column]) - 2.0 * _UNMATCHED, taken | {column}, (*pairs, (row, column)))
+                for column in columns
+                if column not in taken
+            ]
+            for price, now_taken, now_pairs in moves:
+                reachable = frozenset(column for column in now_taken if last[column] > row)
+                if reachable not in following or price < following[reachable][0]:
+                    following[reachable] = price, now_pairs
+        states = following
+    return list(min(states.values(), key=lambda state: state[0])[1])
 
 
 def _settle_splits(groups: list[Group]) -> list[Group]:
@@ -145,23 +163,16 @@ def _settle_splits(groups: list[Group]) -> list[Group]:
 
 def _beside(group: Group, other: Group) -> bool:
     """Within one half-power width of the broader."""
-    f1, a1, _, _ = _middle(group)
-    f2, a2, _, _ = _middle(other)
+    (f1, a1, _, _), (f2, a2, _, _) = _middle(list(group.modes.values())), _middle(list(other.modes.values()))
     return abs(f1 - f2) < max(a1, a2) / math.pi
-
-
-def _middle(group: Group) -> tuple[float, float, float, float]:
-    frequency, decay, u_f, u_a = (float(np.median(number)) for number in _numbers(list(group.modes.values())))
-    return frequency, decay, u_f, u_a
 
 
 def _leave_out_blends(group: Group, other: Group) -> None:
     """Drop from `group` the strikes that lack `other` and lie off the rest towards it, by more than their joint u95."""
-    agreed = Group({strike: mode for strike, mode in group.modes.items() if strike in other.modes})
-    centre, _, u_centre, _ = _middle(agreed)
-    towards = _middle(other)[0] - centre
+    centre, _, u_centre, _ = _middle([mode for strike, mode in group.modes.items() if strike in other.modes])
+    towards = _middle(list(other.modes.values()))[0] - centre
     for strike in [strike for strike in group.modes if strike not in other.modes]:
-        (frequency,), _, (u_f,), _ = _numbers([group.modes[strike]])
+        frequency, _, u_f, _ = _middle([group.modes[strike]])
         away = frequency - centre
         if away * towards > 0.0 and abs(away) > 2.0 * math.hypot(u_f, u_centre):
             del group.modes[strike]
