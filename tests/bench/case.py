@@ -54,27 +54,25 @@ class Case:
     rate_hz: float
     modes: tuple[Truth, ...]
     onset: int
-    """index of the first sample of the ring"""
+    """index of the first sample of the free ring (struck: the first after contact); amplitudes are those there"""
     density: Callable[[Array], Array] | float | None
     """one-sided noise density per hertz (a number if white); None where no bound can be stated"""
-    bound_from: int = 0
-    """first sample the bound may use (the end of contact); 0: the onset"""
     known_lines_hz: tuple[float, ...] = ()
     """steady tones (hum) that must not be reported as modes"""
     expect_doubt: str = ""
     """doubt code that must be there (on the measurement, on its strike or on a counted mode)"""
     invented_is_strays: bool = False
     """True: invented counts only reports with no planted mode (counted or not) within half its width"""
-    near_hz: tuple[float, float] | None = None
-    """only reports within this range are judged (clutter: the recording's own modes are not ours to judge)"""
-    true_q: Callable[[float, float], float] | None = None
-    """drift: Q of the (only) mode over the stretch from t1 to t2 seconds after the onset"""
+    judges_inventions: bool = True
+    """False: the recording holds modes of its own, which are not ours to judge"""
+    true_pole: Callable[[float, float], tuple[float, float]] | None = None
+    """drift: frequency and decay rate of the (only) mode over the stretch from t1 to t2 seconds after the onset"""
     notes: dict[str, float | str] = field(default_factory=dict)
 
     @property
     def ring_samples(self) -> int:
-        """Samples from where the bound starts to the end."""
-        return self.samples.size - max(self.onset, self.bound_from)
+        """Samples from the onset to the end: what the bound may use."""
+        return self.samples.size - self.onset
 
 
 def generator(family: str, seed: int, index: int) -> np.random.Generator:
