@@ -1,0 +1,201 @@
+"""Find candidate modes: from the longest look at the ring to the shortest, fit, subtract, look again.
+
+A long look resolves slow modes and, Hann-weighted, is nearly blind to what is over soon (fast modes, the knock); what it
+found is taken away before the next, shorter look. Each candidate is fitted on a few Hann bins around its peak, neighbours
+jointly. What comes out is rough: `settle` does the fit that counts.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+
+from qmeter.dsp.band import bins_around, hann_bins, ring_sum, spectrum_of
+from qmeter.dsp.noise import FloatArray, NoiseSpectrum, fast_length
+from qmeter.estimate.poles import BinRows, ComplexArray, fit_rows
+
+HANN_POWER = 0.375
+"""mean square of the Hann weights"""
+_PEAK_OVER_FLOOR = 25.0
+_MEDIAN_TO_MEAN = 1.0 / np.log(2.0)
+_LOOK_BINS = 24
+_SHORTEST_S = 0.004
+_BURST_S = (0.008, 0.002, 0.0006)
+"""looks with unweighted bins: what is over within a few milliseconds is mostly gone under a Hann window's soft start"""
+_BURST_PEAKS = 6
+_MOST_PEAKS = 96
+
+
+@dataclass(frozen=True, slots=True)
+class Ring:
+    """The samples after a strike, their rate and the noise they stand in; modes are counted from sample 0."""
+
+    samples: FloatArray
+    rate: float
+    noise: NoiseSpectrum
+    low_hz: float
+    high_hz: float
+
+
+@dataclass(frozen=True, slots=True)
+class Poles:
+    """log-poles per sample (M,) and amplitudes at sample 0 of the ring (M,)."""
+
+    pole: ComplexArray
+    amplitude: ComplexArray
+
+    def __len__(self) -> int:
+        return len(self.pole)
+
+    def take(self, which: object) -> Poles:
+        return Poles(self.pole[which], self.amplitude[which])
+
+    def plus(self, other: Poles) -> Poles:
+        return Poles(np.concatenate([self.pole, other.pole]), np.concatenate([self.amplitude, other.amplitude]))
+
+    @staticmethod
+    def none() -> Poles:
+        return Poles(np.zeros(0, complex), np.zeros(0, complex))
+
+
+def look_lengths(frames: int, rate: float) -> list[int]:
+    """Lengths of the looks, from the whole ring down by factors of four to `_SHORTEST_S`."""
+    lengths = []
+    n = frames
+    while n > _SHORTEST_S * rate or not lengths:
+        lengths.append(fast_length(n))
+        n //= 4
+    return lengths
+
+
+def find_modes(ring: Ring, *, rounds: int = 3) -> Poles:
+    """Candidates over all looks."""
+    found = Poles.none()
+    rest = ring.samples
+    looks = [(n, True) for n in look_lengths(len(rest), ring.rate)]
+    looks += [(fast_length(int(t * ring.rate)), False) for t in _BURST_S if 16 <= t * ring.rate <= len(rest)]
+    for level, (length, hann) in enumerate(looks):
+        for _ in range(rounds if hann else 1):
+            spectrum = spectrum_of(rest, length)
+            new = _look(ring, hann_bins(spectrum) if hann else spectrum, length, longest=level == 0, hann=hann)
+            if not len(new):
+                break
+            found = found.plus(new)
+            rest = rest - ring_sum(new.pole, new.amplitude, 0, len(rest))
+    return found
+
+
+def floor_of(power: FloatArray, ring: Ring, length: int, *, hann: float = HANN_POWER, block: int = 48) -> FloatArray:
+    """Expected power of a bin: the larger of the noise and the local median of the spectrum itself (blocks of `block` bins)."""
+    bins = len(power)
+    blocks = max(bins // block, 1)
+    used = blocks * block if bins >= block else bins
+    medians = np.median(power[:used].reshape(blocks, -1), axis=1) * _MEDIAN_TO_MEAN
+    centre_hz = (np.arange(blocks) + 0.5) * (used / blocks) * ring.rate / length
+    known = ring.noise.at(centre_hz) * (length * ring.rate / 2 * hann)
+    level = np.maximum(medians, known)
+    return np.repeat(level, used // blocks) if used == bins else np.append(np.repeat(level, used // blocks), np.full(bins - used, level[-1]))
+
+
+def _look(ring: Ring, bins: ComplexArray, length: int, *, longest: bool, hann: bool) -> Poles:
+    """One look: peaks of the bins over the floor, fitted; those that rang for a fair part of this look are kept."""
+    power = bins.real**2 + bins.imag**2
+    floor = floor_of(power, ring, length, hann=HANN_POWER if hann else 1.0)
+    step = ring.rate / length
+    lo, hi = max(int(ring.low_hz / step), 2), min(int(ring.high_hz / step) + 1, len(power) - 2)
+    if hi - lo < 2:
+        return Poles.none()
+    mid = power[lo:hi]
+    is_peak = (mid > power[lo - 1 : hi - 1]) & (mid >= power[lo + 1 : hi + 1]) & (mid > _PEAK_OVER_FLOOR * floor[lo:hi])
+    peaks = np.flatnonzero(is_peak) + lo
+    if not len(peaks):
+        return Poles.none()
+    most = _MOST_PEAKS if hann else _BURST_PEAKS
+    if len(peaks) > most:
+        peaks = np.sort(peaks[np.argsort(power[peaks])[-most:]])
+    start = _first_guess(bins, peaks, length) if hann else _first_guess_plain(bins, peaks, length)
+    # a peak that leaks from a much stronger neighbour waits for the next round
+    keep = np.ones(len(peaks), bool)
+    for i in range(len(peaks) - 1):
+        if peaks[i + 1] - peaks[i] < 4:
+            keep[i if power[peaks[i]] < power[peaks[i + 1]] else i + 1] = False
+    return _fit_peaks(ring, bins, floor, peaks[keep], start[keep], length, longest=longest, hann=hann)
+
+
+def _first_guess(hann: ComplexArray, peaks: np.ndarray, length: int) -> ComplexArray:
+    """Pole from two neighbouring Hann bins: with x = i theta_k - s and d = 2 pi i/N, X[k]/X[k+1] = (x + 2d)/(x - d).
+
+    (The Hann combination of 1/x, 1/(x-d), 1/(x+d) is proportional to 1/(x (x-d)(x+d)); near the pole 1 - u = x.)
+    """
+    left_larger = np.abs(hann[peaks - 1]) > np.abs(hann[peaks + 1])
+    k = np.where(left_larger, peaks - 1, peaks)
+    ratio = hann[k] / hann[k + 1]
+    d = 2j * np.pi / length
+    x = d * (2 + ratio) / (ratio - 1)
+    s = 2j * np.pi * k / length - x
+    decay = np.clip(-s.real * length, 0.2, 14.0) / length
+    omega = np.clip(s.imag, 2 * np.pi * (peaks - 1) / length, 2 * np.pi * (peaks + 1) / length)
+    return -decay + 1j * omega
+
+
+def _first_guess_plain(bins: ComplexArray, peaks: np.ndarray, length: int) -> ComplexArray:
+    """Pole from two neighbouring plain bins: X[k]/X[k+1] = (1 - z e_(k+1)) / (1 - z e_k), e_k = exp(-2 pi i k/N), solved for z."""
+    left_larger = np.abs(bins[peaks - 1]) > np.abs(bins[peaks + 1])
+    k = np.where(left_larger, peaks - 1, peaks)
+    ratio = bins[k] / bins[k + 1]
+    one, two = np.exp(-2j * np.pi * k / length), np.exp(-2j * np.pi * (k + 1) / length)
+    s = np.log((1 - ratio) / (two - ratio * one))
+    decay = np.clip(-s.real * length, 0.5, 20.0) / length
+    omega = np.clip(s.imag, 2 * np.pi * (peaks - 1) / length, 2 * np.pi * (peaks + 1) / length)
+    return np.asarray(-decay + 1j * omega)
+
+
+def _fit_peaks(
+    ring: Ring, hann_or_plain: ComplexArray, floor: FloatArray, peaks: np.ndarray, start: ComplexArray, length: int, *, longest: bool, hann: bool
+) -> Poles:
+    out = Poles.none()
+    for members in _neighbours(peaks):
+        m = len(members[0])
+        bins = min(_LOOK_BINS if m == 1 else _LOOK_BINS + 16 * (m - 1), length // 2 - 1)
+        rows = np.array(members)
+        first = np.clip((peaks[rows[:, 0]] + peaks[rows[:, -1]]) // 2 - bins // 2, 1, max(length // 2 - bins, 1))
+        level = floor[np.clip((peaks[rows[:, 0]] + peaks[rows[:, -1]]) // 2, 0, len(floor) - 1)]
+        data = BinRows(
+            bins_around(hann_or_plain, first, bins),
+            np.repeat(1.0 / level[:, None], bins, axis=1),
+            first,
+            np.full(len(rows), length),
+            hann=hann,
+        )
+        fit = fit_rows(
+            data, start[rows], steps=6 if m == 1 else 10, decay_bounds=(np.full(rows.shape, 0.02 / length), np.full(rows.shape, 40.0 / length))
+        )
+        ok = _plausible(fit.pole, fit.amplitude, peaks[rows], level, length, longest=longest, most_decays=14.0 if hann else 25.0)
+        out = out.plus(Poles(fit.pole[ok], fit.amplitude[ok]))
+    return out
+
+
+def _plausible(
+    pole: ComplexArray, amplitude: ComplexArray, peaks: np.ndarray, level: FloatArray, length: int, *, longest: bool, most_decays: float
+) -> np.ndarray:
+    decays = -pole.real * length
+    moved = np.abs(pole.imag * length / (2 * np.pi) - peaks)
+    energy = (np.abs(amplitude) / 2 * (1 - np.exp(-decays)) / (decays / length)) ** 2 * HANN_POWER
+    return np.asarray(
+        (decays < most_decays) & (decays > (0.0 if longest else 0.3)) & (moved < 2.0 + decays / np.pi) & (energy > 6.0 * level[:, None]) & (amplitude != 0)
+    )
+
+
+def _neighbours(peaks: np.ndarray) -> list[list[list[int]]]:
+    """Runs of peaks closer than 10 bins, at most 4 to a run, collected by their size (one batch a size)."""
+    runs: list[list[int]] = []
+    for i in range(len(peaks)):
+        if runs and peaks[i] - peaks[runs[-1][-1]] < 10 and len(runs[-1]) < 4:
+            runs[-1].append(i)
+        else:
+            runs.append([i])
+    by_size: dict[int, list[list[int]]] = {}
+    for run in runs:
+        by_size.setdefault(len(run), []).append(run)
+    return list(by_size.values())

@@ -1,0 +1,192 @@
+"""Modes that must be fitted together, and the bins their fit takes.
+
+Two lines closer than a few half-power widths share their bins; a joint fit (all of them in one row of `poles.fit_rows`) keeps
+their covariance. Rows come in few sizes, so that most of them share one batch.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Callable
+from dataclasses import dataclass
+
+import numpy as np
+
+from qmeter.dsp.band import bins_around, ring_sum, spectrum_of
+from qmeter.dsp.noise import FloatArray, fast_length
+from qmeter.estimate.find import Poles, Ring
+from qmeter.estimate.poles import BinRows, ComplexArray, IntArray, RowFit, bin_response, fit_rows
+
+JOINT_WIDTHS = 4.0
+"""|omega_i - omega_j| < 4 (a_i + a_j) is fitted jointly: eight half-power widths (of the mean) or less apart"""
+JOINT_DECAYS = 12.0
+"""ratio of decay rates beyond which two overlapping modes are fitted in turn"""
+LONG = 9.0
+"""time constants of the slowest mode that a fit covers: less than 1 % of the information lies beyond 4"""
+HALF_BAND_WIDTHS = 8.0
+GROUP_MOST = 6
+BIN_SIZES = (24, 32, 48, 64, 96, 128, 192, 256, 384, 512, 768)
+
+
+def joint_groups(poles: Poles, steady_decay: float) -> list[IntArray]:
+    """Indices of the modes of each joint group, neighbours by frequency.
+
+    Slower than `steady_decay` (per sample) is as good as a steady tone: it joins the modes beside it, however fast they are.
+    """
+    order = np.argsort(poles.pole.imag)
+    s = poles.pole[order]
+    groups: list[list[int]] = []
+    for i in range(len(s)):
+        home = None
+        for group in reversed(groups[-4:]):
+            if len(group) >= GROUP_MOST:
+                continue
+            for j in group:
+                near = s[i].imag - s[j].imag < -JOINT_WIDTHS * (s[i].real + s[j].real)
+                if near and (_alike(s[i], s[j]) or min(-s[i].real, -s[j].real) < steady_decay):
+                    home = group
+                    break
+            if home is not None:
+                break
+        if home is None:
+            groups.append([i])
+        else:
+            home.append(i)
+    return [order[np.array(g)] for g in groups]
+
+
+def _alike(one: complex, other: complex) -> bool:
+    return 1 / JOINT_DECAYS < one.real / other.real < JOINT_DECAYS
+
+
+@dataclass(frozen=True, slots=True)
+class Batch:
+    """Groups of one shape: which modes (R, M), where each row starts and how long it is, and its bins."""
+
+    members: IntArray
+    start: IntArray
+    rows: BinRows
+
+
+class Looks:
+    """Spectra of what is left of the ring, cut at shared starts and lengths; computed when first asked for."""
+
+    def __init__(self, ring: Ring, rest: FloatArray) -> None:
+        self._ring, self._rest = ring, rest
+        self._spectra: dict[tuple[int, int], ComplexArray] = {}
+        self._lengths = [n for n in _halvings(len(rest))]
+
+    def length_for(self, wanted: float, start: int) -> int:
+        """The shortest shared length that covers `wanted` samples from `start` (or the longest there is)."""
+        best = fast_length(len(self._rest) - start)
+        for n in self._lengths:
+            if wanted <= n <= best:
+                best = n
+        return best
+
+    def spectrum(self, start: int, length: int) -> ComplexArray:
+        key = (start, length)
+        if key not in self._spectra:
+            self._spectra[key] = spectrum_of(self._rest[start:], length)
+        return self._spectra[key]
+
+
+def _halvings(frames: int) -> list[int]:
+    lengths = []
+    n = frames
+    while n >= 64:
+        lengths.append(fast_length(n))
+        n //= 2
+    return lengths
+
+
+def batches(ring: Ring, poles: Poles, groups: list[IntArray], starts: IntArray, looks: Looks, *, long: float = LONG) -> list[Batch]:
+    """The rows that fit `groups`: what is left of the ring around each, with the group's own modes put back."""
+    shapes: dict[tuple[int, int], list[tuple[IntArray, int, int, int]]] = {}
+    for group in groups:
+        s = poles.pole[group]
+        start = int(starts[group].max())
+        length = looks.length_for(_span_of(-s.real, long), start)
+        first, bins = _bins_for(s, length)
+        shapes.setdefault((len(group), bins), []).append((group, start, length, first))
+    out = []
+    for (_, bins), items in shapes.items():
+        members = np.array([i[0] for i in items])
+        start = np.array([i[1] for i in items])
+        length = np.array([i[2] for i in items])
+        first = np.array([i[3] for i in items])
+        data = np.empty((len(items), bins), complex)
+        for r, (_, t0, n, k0) in enumerate(items):
+            data[r] = bins_around(looks.spectrum(t0, n), np.array([k0]), bins)[0]
+        data += own_bins(poles, members, start, first, length, bins)
+        centre = (first[:, None] + np.arange(bins)) * (ring.rate / length[:, None])
+        weight = 2.0 / (ring.noise.at(np.abs(centre)) * (length * ring.rate)[:, None])
+        out.append(Batch(members, start, BinRows(data, weight, first, length)))
+    return out
+
+
+def _span_of(decay: FloatArray, long: float) -> float:
+    """Samples to fit: `long` time constants of the slowest; beside a steady tone four times those of the slowest that decays faster."""
+    slow = float(decay.min())
+    faster = decay[decay > JOINT_DECAYS * slow]
+    return min(long / slow, 4 * long / float(faster.min())) if len(faster) else long / slow
+
+
+def own_bins(poles: Poles, members: IntArray, start: IntArray, first: IntArray, length: IntArray, bins: int) -> ComplexArray:
+    """Bins (R, K) of the modes `members` (R, M) from `start` on."""
+    s = poles.pole[members]
+    c = poles.amplitude[members] * np.exp(s * start[:, None])
+    d, _, db, _ = bin_response(s, first, length, bins, False)
+    return np.asarray(0.5 * (np.einsum("rm,rmk->rk", c, d) + np.einsum("rm,rmk->rk", c.conj(), db)))
+
+
+def _bins_for(s: ComplexArray, length: int) -> tuple[int, int]:
+    """First bin and number of bins: eight half-power widths either side of every mode, ten bins at least."""
+    width = np.maximum(HALF_BAND_WIDTHS * -s.real * length / np.pi, 10.0)
+    at = s.imag * length / (2 * np.pi)
+    low, high = float(np.min(at - width)), float(np.max(at + width))
+    low, high = max(low, 1.0), min(high, length / 2 - 1.0)
+    need = int(np.ceil(high - low)) + 1
+    bins = next((b for b in BIN_SIZES if b >= need), BIN_SIZES[-1])
+    bins = max(min(bins, length // 2 - 1), 4)
+    first = int(round((low + high) / 2 - bins / 2))
+    return int(np.clip(first, 1, max(length // 2 - bins, 1))), bins
+
+
+@dataclass(frozen=True, slots=True)
+class GroupFit:
+    """The fit of one batch beside the batch itself."""
+
+    batch: Batch
+    fit: RowFit
+
+    @property
+    def freedom(self) -> FloatArray:
+        """Expected chi2 of each row for noise alone: bins minus the two complex parameters of each mode."""
+        return np.full(len(self.fit.chi2), max(self.batch.rows.data.shape[1] - 2.0 * self.batch.members.shape[1], 1.0))
+
+
+def fit_groups(ring: Ring, poles: Poles, groups: list[IntArray], starts: IntArray, looks: Looks, *, steps: int, long: float = LONG) -> list[GroupFit]:
+    """Fit every group from where its poles stand."""
+    out = []
+    for batch in batches(ring, poles, groups, starts, looks, long=long):
+        fit = fit_rows(batch.rows, poles.pole[batch.members], steps=steps if batch.members.shape[1] == 1 else 2 * steps)
+        out.append(GroupFit(batch, fit))
+    return out
+
+
+def moved(poles: Poles, fits: list[GroupFit], accept: Callable[[GroupFit], np.ndarray] | None = None) -> Poles:
+    """The poles after these fits (rows where `accept` is false stay)."""
+    s, c = poles.pole.copy(), poles.amplitude.copy()
+    for g in fits:
+        ok = np.isfinite(g.fit.pole).all(axis=1) & np.isfinite(g.fit.amplitude).all(axis=1)
+        if accept is not None:
+            ok &= accept(g)
+        m = g.batch.members[ok]
+        s[m] = g.fit.pole[ok]
+        c[m] = g.fit.amplitude[ok] * np.exp(-g.fit.pole[ok] * g.batch.start[ok][:, None])
+    return Poles(s, c)
+
+
+def rest_of(ring: Ring, poles: Poles) -> FloatArray:
+    """What the modes leave of the ring."""
+    return np.asarray(ring.samples - ring_sum(poles.pole, poles.amplitude, 0, len(ring.samples)))

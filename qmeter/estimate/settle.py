@@ -1,0 +1,207 @@
+"""The fit that counts: every mode on enough of the ring, from the start that serves it best, with its neighbours.
+
+Rounds: all groups are fitted at a common start; the residual then says when the knock is over, band by band, and with it the best
+start of each mode; the fit is repeated there. Groups that do not reach the noise are looked at again from scratch (a close pair
+fitted as one line). What does not stand out of its surroundings is dropped.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+
+from qmeter.dsp.noise import FloatArray
+from qmeter.estimate.find import Poles, Ring
+from qmeter.estimate.groups import GroupFit, Looks, fit_groups, joint_groups, moved, rest_of
+from qmeter.estimate.poles import IntArray
+from qmeter.estimate.profile import Profiles, best_start, profiles, spread_in_time
+from qmeter.estimate.resolve import resolve
+
+STARTS_S = np.array([0.0, 0.1, 0.2, 0.4, 0.7, 1.1, 1.7, 2.6, 4.0, 6.0, 9.0, 14.0, 21.0, 35.0, 60.0, 100.0, 170.0]) * 1e-3
+"""the fixed ladder of starts after the onset"""
+FIRST_START = 0.3
+"""time constants a first fit may leave out to stay clear of the contact"""
+SAME_WIDTHS = 0.15
+"""two poles closer than this many half-power widths, with like decays, are one mode found twice"""
+STEADY = 0.15
+"""time constants within the whole ring below which a line is as good as a steady tone"""
+SWEEPS = 5
+LEAST_ENERGY = 40.0
+"""(a/u(a))^2 = rho^2/4 must exceed a tenth of this: rho^2 over the local residual"""
+
+
+@dataclass(frozen=True, slots=True)
+class Settled:
+    """Modes with the covariance of their fit.
+
+    covariance: (M, 2, 2) of (alpha, omega) per sample, against the residual's spread in time and local level. fisher: the same for
+    stationary noise of the measured spectrum. start: (M,) samples; length: (M,); excess: (M,) chi2 over its expectation.
+    group: (M,) number of the joint group.
+    """
+
+    poles: Poles
+    covariance: FloatArray
+    fisher: FloatArray
+    start: IntArray
+    length: IntArray
+    excess: FloatArray
+    group: IntArray
+
+    def take(self, which: object) -> Settled:
+        return Settled(
+            self.poles.take(which),
+            self.covariance[which],
+            self.fisher[which],
+            self.start[which],
+            self.length[which],
+            self.excess[which],
+            self.group[which],
+        )
+
+
+def settle(ring: Ring, poles: Poles, contact: int) -> Settled:
+    """Final values of the candidates `poles`; `contact` is the sample at which the contact force has ended."""
+    starts = first_starts(poles, contact)
+    for _ in range(2):
+        poles, starts = merged(poles, starts)
+        if not len(poles):
+            return _nothing()
+        looks = Looks(ring, rest_of(ring, poles))
+        fits = fit_groups(ring, poles, joint_groups(poles, STEADY / len(ring.samples)), starts, looks, steps=6)
+        poles = moved(poles, fits, _sane)
+    for sweep in range(SWEEPS):
+        rest = rest_of(ring, poles)
+        table = profiles(ring, rest)
+        if sweep >= SWEEPS - 3:
+            starts = choose_starts(ring, poles, table)
+        else:
+            starts = first_starts(poles, contact)
+        fits = fit_groups(ring, poles, joint_groups(poles, STEADY / len(ring.samples)), starts, Looks(ring, rest), steps=6)
+        poles = moved(poles, fits, _sane)
+        settled = collect(ring, poles, fits, table)
+        if sweep == SWEEPS - 1:
+            break
+        swaps = resolve(poles, fits, 1.5) if sweep < SWEEPS - 2 else []
+        poles = swapped(poles, worthy(settled, ring), swaps)
+        poles, starts = merged(poles, first_starts(poles, contact))
+        if not len(poles):
+            return _nothing()
+    return settled.take(worthy(settled, ring) & ~steady(settled.poles, ring))
+
+
+def swapped(poles: Poles, keep: np.ndarray, swaps: list[tuple[np.ndarray, Poles]]) -> Poles:
+    """The poles with whole groups replaced by what their bins ask for."""
+    keep = keep.copy()
+    fresh = Poles.none()
+    for members, new in swaps:
+        keep[members] = False
+        fresh = fresh.plus(new)
+    return poles.take(keep).plus(fresh)
+
+
+def merged(poles: Poles, starts: IntArray) -> tuple[Poles, IntArray]:
+    """Without the same mode twice: the stronger of two poles within `SAME_WIDTHS` stays."""
+    order = np.argsort(-np.abs(poles.amplitude) ** 2 / -poles.pole.real)
+    kept: list[int] = []
+    for i in order:
+        s = poles.pole[i]
+        if not np.isfinite(s) or s.real >= 0:
+            continue
+        other = poles.pole[kept]
+        width = 2.0 * np.minimum(-s.real, -other.real)
+        if not np.any((np.abs(s.imag - other.imag) < SAME_WIDTHS * width) & (np.abs(np.log(s.real / other.real)) < 0.5)):
+            kept.append(int(i))
+    index = np.sort(np.array(kept, dtype=int))
+    return poles.take(index), starts[index]
+
+
+def first_starts(poles: Poles, contact: int) -> IntArray:
+    """Clear of the contact, but never so late that a fast mode is gone."""
+    return np.minimum(contact, np.floor(FIRST_START / np.maximum(-poles.pole.real, 1e-9))).astype(np.int64)
+
+
+def choose_starts(ring: Ring, poles: Poles, table: Profiles) -> IntArray:
+    """The start of the ladder with the least variance: as early as the residual lets it."""
+    out = np.zeros(len(poles), np.int64)
+    for m, s in enumerate(poles.pole):
+        decay = -s.real * ring.rate
+        usable = STARTS_S[STARTS_S * decay < 2.5]
+        band = table.near(s.imag * ring.rate / (2 * np.pi), decay)
+        best, _ = best_start(band, decay, usable, max(1e-4, band.step_s))
+        out[m] = int(round(usable[best] * ring.rate))
+    return np.minimum(out, max(len(ring.samples) - 64, 0))
+
+
+def _sane(g: GroupFit) -> np.ndarray:
+    """Rows whose poles decay and whose amplitudes stay within reason."""
+    return np.asarray((g.fit.pole.real < 0).all(axis=1) & (np.abs(g.fit.amplitude) < 1e3).all(axis=1))
+
+
+def collect(ring: Ring, poles: Poles, fits: list[GroupFit], table: Profiles) -> Settled:
+    """Covariances of all modes: Fisher's, and the one that hears where in time the residual stands."""
+    m = len(poles)
+    covariance, fisher = np.full((m, 2, 2), np.inf), np.full((m, 2, 2), np.inf)
+    start, length, group = np.zeros(m, int), np.zeros(m, int), np.zeros(m, int)
+    excess = np.full(m, np.inf)
+    number = 0
+    for g in fits:
+        for r in range(len(g.batch.members)):
+            members = g.batch.members[r]
+            hz = float(np.mean(poles.pole[members].imag)) * ring.rate / (2 * np.pi)
+            n = int(g.batch.rows.length[r])
+            t0, t1 = g.batch.start[r] / ring.rate, n / ring.rate
+            band = table.near(hz, float(np.max(-poles.pole[members].real)) * ring.rate)
+            root = np.sqrt(g.batch.rows.weight[r])
+            factor = spread_in_time(band, g.fit.influence[r], root, t0, t1)
+            expected = float(band.mean_between(np.array([t0]), np.array([t0 + t1]))[0])
+            ratio = float(g.fit.chi2[r] / g.freedom[r])
+            local = _local_level(ring, g, r, ratio, hz)
+            raise_by = np.sqrt(np.maximum(factor, 1.0) * max(local / max(expected, 1.0), 1.0)) * np.sqrt(min(max(local, 0.5), 1.0))
+            for j, i in enumerate(members):
+                block = g.fit.covariance[r, 2 * j : 2 * j + 2, 2 * j : 2 * j + 2]
+                fisher[i] = block
+                covariance[i] = block * raise_by[2 * j : 2 * j + 2, None] * raise_by[None, 2 * j : 2 * j + 2]
+                start[i], length[i], excess[i], group[i] = g.batch.start[r], n, ratio, number
+            number += 1
+    return Settled(poles, covariance, fisher, start, length, excess, group)
+
+
+def _local_level(ring: Ring, g: GroupFit, r: int, ratio: float, hz: float) -> float:
+    """Residual over assumed noise, the two estimates weighted by the bins behind each (the quiet's PSD has its own scatter)."""
+    behind = float(ring.noise.bins_at(hz))
+    here = float(g.freedom[r])
+    if ratio > 1.6:
+        return ratio
+    return (behind + here * ratio) / (behind + here)
+
+
+def worthy(s: Settled, ring: Ring) -> np.ndarray:
+    """Modes whose energy stands out of the residual around them: (a/u(a))^2 = rho^2/4 for a lone line (Fisher).
+
+    A steady tone has no decay to be sure of; it stays while its amplitude stands out, to shield its neighbours.
+    """
+    a = -s.poles.pole.real
+    with np.errstate(all="ignore"):
+        rho2 = 4 * a**2 / s.covariance[:, 0, 0]
+    hz = s.poles.pole.imag * ring.rate / (2 * np.pi)
+    inside = (hz > ring.low_hz) & (hz < ring.high_hz)
+    level = ring.noise.at(hz) * ring.rate / 2 * np.maximum(s.excess, 1.0)
+    tone = steady(s.poles, ring) & (np.abs(s.poles.amplitude) ** 2 * s.length / 4 > 16 * level)
+    return np.asarray(inside & ((rho2 > LEAST_ENERGY) | tone))
+
+
+def steady(poles: Poles, ring: Ring) -> np.ndarray:
+    """Lines that do not decay within the ring, or that stood in the quiet before it with half their amplitude or more."""
+    frames = len(ring.samples)
+    flag = -poles.pole.real * frames < STEADY
+    hz = poles.pole.imag * ring.rate / (2 * np.pi)
+    for tone_hz, amplitude in zip(ring.noise.tones_hz, ring.noise.tone_amplitude, strict=True):
+        near = np.abs(hz - tone_hz) < max(ring.noise.resolution_hz, 2 * ring.rate / frames)
+        flag |= near & (-poles.pole.real * frames < 2.0) & (amplitude > 0.5 * np.abs(poles.amplitude))
+    return np.asarray(flag)
+
+
+def _nothing() -> Settled:
+    zero = np.zeros(0, int)
+    return Settled(Poles.none(), np.zeros((0, 2, 2)), np.zeros((0, 2, 2)), zero, zero, np.zeros(0), zero)
