@@ -80,8 +80,8 @@ def test_close_pair_of_equal_damping(widths: float, factor: str) -> None:
     frequency_hz, a = 5000.0, 20.0
     pair = [frequency_hz, frequency_hz + widths * a / math.pi]
     assert_prints_as(1.0 + 1.0 / widths**2, factor)
-    amplitudes: list[complex]
-    for amplitudes in ([1.0, 1.0], [1.0, 0.2j]):
+    choices: list[list[complex]] = [[1.0, 1.0], [1.0, 0.2j]]
+    for amplitudes in choices:
         u_f, u_a = long_bound(pair, [a, a], amplitudes)
         closed = 4.0 * a**1.5 * 0.01 / math.sqrt(RATE_HZ) / np.abs(amplitudes) * (1.0 + 1.0 / widths**2)
         assert_allclose(u_a, closed, rtol=5e-3, atol=0)
