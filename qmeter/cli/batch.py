@@ -43,11 +43,12 @@ class Outcome:
 
 def measure_file(job: Job) -> Outcome:
     """Read and measure one file; every error but a wrong option becomes an outcome."""
-    from qmeter.estimate.measure import measure
-    from qmeter.sound.files import Recording
-
     try:
+        from qmeter.sound.files import Recording
+
         recording = Recording.load(job.file, from_s=job.from_s, to_s=job.to_s)
+        from qmeter.estimate.measure import measure  # loads SciPy: not for a file that cannot be read
+
         measurement = measure(recording, job.settings)
     except UsageError:
         raise
@@ -67,7 +68,7 @@ def _failed(job: Job, code: str, says: str, exit_status: int) -> Outcome:
 
 def exit_status(outcomes: Sequence[Outcome]) -> int:
     """0 when anything rang in any file; 3 when nothing did; 4 when a file could not be read; 1 after a bug."""
-    worst = {outcome.exit_status for outcome in outcomes} - {NothingRangError.exit_status}
+    worst = {outcome.exit_status for outcome in outcomes} - {0, NothingRangError.exit_status}
     if worst:
         return 1 if 1 in worst else max(worst)
     rang = any(outcome.measurement is not None and outcome.measurement.modes for outcome in outcomes)

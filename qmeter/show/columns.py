@@ -22,7 +22,8 @@ _STRIP_LEAST = 14
 _STRIP_MOST = 44
 _STRIP_BEFORE_EXTRAS = 24
 """the strip gets this much before any further column is let in"""
-_LABEL = 8
+_LABEL = 7
+"""cells after the strip, for its range in decibels"""
 
 
 @dataclass(frozen=True, slots=True)
@@ -161,9 +162,12 @@ def _strips(modes: Sequence[Mode], width: int, view: Look) -> Column:
     cells = []
     for mode in modes:
         drawn = blank if mode.trace is None else strip.draw(mode.trace, width=width, depth=depth, unicode=view.unicode)
-        until = "" if mode.trace is None else _seconds(mode.trace.fit_to_s)
-        labels = (f"{mode.decay_range_db:.0f} dB", until)
-        cells.append((Text.assemble(drawn[0], " ", (labels[0], look.NOTE)), Text.assemble(drawn[1], " ", (labels[1], look.NOTE))))
+        above, below = drawn[0], drawn[1].copy()
+        if mode.trace is not None:
+            below.rstrip()  # so that the time stands where the fit ends
+            above = Text.assemble(above, " ", (f"{mode.decay_range_db:.0f} dB", look.NOTE))
+            below = Text.assemble(below, " ", (_seconds(mode.trace.fit_to_s), look.NOTE))
+        cells.append((above, below))
     head = (f"decay, {depth} dB high", f"off the fit, {strip.STEP_DB:g} dB a step")
     if len(head[1]) > width + _LABEL:
         head = (f"{depth} dB high", f"{strip.STEP_DB:g} dB a step")

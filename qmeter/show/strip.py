@@ -1,12 +1,12 @@
 """The decay strip: two lines of text from which one sees whether a mode's figures can be believed.
 
 Time runs from the strike to the right. The upper line is the level in decibels, falling: bright where the figures rest on it, dim
-where it was left out, down to the noise floor. The lower line is the fitted decay pulled straight, as long as the part that was
-fitted, with the level's departure from it magnified to `STEP_DB` a step: a straight stroke is a clean decay; one that bows, waves or
-frays is not.
+where it was left out, down to the noise floor; dots stand for the floor where no level was traced. The lower line is the fitted
+decay pulled straight, as long as the part that was fitted, with the level's departure from it magnified to `STEP_DB` a step: a
+straight stroke is a clean decay; one that bows, waves or frays is not.
 
-    █▇▇▆▆▅▅▄▄▃▃▂▂▂▂▂▂   44 dB        █▇▆▅▅▄▄▄▃▃▃▃▂▂▂▂   31 dB
-X
+    █▇▇▆▆▅▅▄▄▃▃▂▂▂▂▂▂   44 dB        █▇▆▅▅▄▄▄▃▃▃▃⣀⣀⣀⣀   31 dB
+     ───────────⠒⠤      0.90 s        ⠉⠒─⠤⠤⣀⠤⠤─⠒⠉       0.72 s
 """
 
 from __future__ import annotations
@@ -24,6 +24,8 @@ STEP_DB = 1.0
 
 _LEVELS = " ▁▂▃▄▅▆▇█"
 _LEVELS_ASCII = " .:-=+*#@"
+_FLOOR = " ⣀⠤⠒⠉"
+_FLOOR_ASCII = " .:::"
 _TRACK = "⣀⠤─⠒⠉"
 _TRACK_ASCII = "__-^^"
 _DEPTHS_DB = (16, 24, 32, 40, 48, 64, 80, 96)
@@ -48,8 +50,7 @@ def top_dbfs(trace: DecayTrace) -> float:
 
 def span_s(trace: DecayTrace) -> float:
     """Seconds from the strike that the strip shows: the fit, and a stretch of what follows it."""
-    end = trace.start_s + trace.step_s * max(len(trace.level_dbfs) - 1, 0)
-    return max(trace.fit_to_s, min(end, _BEYOND_FIT * trace.fit_to_s))
+    return _BEYOND_FIT * trace.fit_to_s
 
 
 def draw(trace: DecayTrace, *, width: int, depth: float, unicode: bool = True) -> tuple[Text, Text]:
@@ -60,7 +61,10 @@ def draw(trace: DecayTrace, *, width: int, depth: float, unicode: bool = True) -
     for index in range(width):
         level = level_between(trace, index * column_s, (index + 1) * column_s)
         fitted = _fitted_dbfs(trace, (index + 0.5) * column_s, 0.5 * column_s)
-        upper.append(_level_glyph(level, top, depth, unicode), look.UNUSED if fitted is None else look.MEASURED)
+        if level is None and (index + 0.5) * column_s > trace.fit_from_s:
+            upper.append(_floor_glyph(trace.floor_dbfs, top, depth, unicode), look.FLOOR)
+        else:
+            upper.append(_level_glyph(level, top, depth, unicode), look.UNUSED if fitted is None else look.MEASURED)
         track = _track_glyph(level, fitted, unicode)
         lower.append(track, "" if track == " " else look.LINE)
     return upper, lower
@@ -99,10 +103,20 @@ def _decibels(power: float) -> float:
 
 def _level_glyph(level: float | None, top: float, depth: float, unicode: bool) -> str:
     glyphs = _LEVELS if unicode else _LEVELS_ASCII
-    if level is None or not math.isfinite(level):
-        return glyphs[0]
-    height = math.ceil((level - (top - depth)) / depth * (len(glyphs) - 1))
-    return glyphs[min(max(height, 0), len(glyphs) - 1)]
+    return " " if level is None else glyphs[_height(level, top, depth, len(glyphs) - 1)]
+
+
+def _floor_glyph(floor: float, top: float, depth: float, unicode: bool) -> str:
+    """Dots at the height of the noise floor, where no level was traced."""
+    glyphs = _FLOOR if unicode else _FLOOR_ASCII
+    return glyphs[_height(floor, top, depth, len(glyphs) - 1)]
+
+
+def _height(level: float, top: float, depth: float, steps: int) -> int:
+    """Height in steps above the strip's lower edge, 0 when below it."""
+    if not math.isfinite(level):
+        return 0
+    return min(max(math.ceil((level - (top - depth)) / depth * steps), 0), steps)
 
 
 def _track_glyph(level: float | None, fitted: float | None, unicode: bool) -> str:
