@@ -120,7 +120,7 @@ def test_version(capsys: pytest.CaptureFixture[str]) -> None:
     [
         ([], "Missing argument"),
         (["a.wav", "--rang", "1", "2"], "No such option"),
-        (["a.wav", "--most", "many"], "not a valid integer"),
+        (["a.wav", "--most", "many"], "valid integer"),
         (["a.wav", "--json", "--csv"], "exclude one another"),
         (["a.wav", "--channel", "0"], "--channel 0: it counts from 1"),
         (["a.wav", "--jobs", "-2"], "--jobs -2: it counts from 1"),
@@ -347,7 +347,7 @@ def test_interrupted(folder: Path, runner: list[str], jobs: str) -> None:
     files = [str(write_wav(folder / f"slow-{n}.wav")) for n in range(4)]
     process = subprocess.Popen([*runner, *files, "--jobs", jobs], stdout=subprocess.PIPE, stderr=subprocess.PIPE, start_new_session=True)
     assert process.stderr is not None
-    assert process.stderr.readline() == b"measuring\n"
+    assert process.stderr.readline().startswith(b"measuring")
     time.sleep(0.3)
     os.killpg(process.pid, signal.SIGINT)  # the terminal sends it to every process of the group
     _, err = process.communicate(timeout=20)  # returns only when no process holds the pipes
