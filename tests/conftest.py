@@ -41,20 +41,21 @@ def find_real(name: str) -> Path | None:
     return None
 
 
+def real_path(name: str) -> Path:
+    """Path of a real recording; without it the calling test is skipped, or fails if they are required."""
+    path = find_real(name)
+    if path is not None:
+        return path
+    says = f"{name} of the Debian package sonic-pi-samples is missing or not the one expected: run `sh .ci/setup test`"
+    if os.environ.get(REQUIRE_REAL):
+        pytest.fail(f"{says} ({REQUIRE_REAL} is set)")
+    pytest.skip(says)
+
+
 @pytest.fixture(scope="session")
 def real_recording() -> Callable[[str], Path]:
-    """Gives the path of a recording of sonic-pi-samples by its file name; without it the test is skipped, or fails if they are required."""
-
-    def path_of(name: str) -> Path:
-        path = find_real(name)
-        if path is not None:
-            return path
-        says = f"{name} of the Debian package sonic-pi-samples is missing or not the one expected: run `sh .ci/setup test`"
-        if os.environ.get(REQUIRE_REAL):
-            pytest.fail(f"{says} ({REQUIRE_REAL} is set)")
-        pytest.skip(says)
-
-    return path_of
+    """Gives the path of a recording of sonic-pi-samples by its file name, see `real_path`."""
+    return real_path
 
 
 def pytest_report_header() -> str:

@@ -1,4 +1,4 @@
-"""The documents say what the code does: doubts are listed, links lead somewhere, the continuous integration runs the README's command."""
+"""The documents say what the code does, and the continuous integration does what the README says: no real recordings, no pass."""
 
 from __future__ import annotations
 
@@ -7,6 +7,8 @@ import re
 from pathlib import Path
 
 import pytest
+
+from tests import conftest
 
 ROOT = Path(__file__).resolve().parent.parent
 DOCUMENTS = sorted([*ROOT.glob("*.md"), *ROOT.glob("docs/**/*.md")])
@@ -55,3 +57,18 @@ def test_continuous_integration_runs_the_command_of_the_readme() -> None:
     script = (ROOT / ".ci/run").read_text(encoding="utf-8")
     assert re.search(r"^timeout -s KILL \d+ sh tests/run </dev/null$", script, re.MULTILINE)
     assert "export QMETER_REQUIRE_REAL=1" in script
+
+
+@pytest.mark.parametrize("contents", [None, b"not the recording"])
+def test_missing_recordings_are_a_skip_or_a_failure(tmp_path: Path, monkeypatch: pytest.MonkeyPatch, contents: bytes | None) -> None:
+    """Without the recording, or with another of its name, a test is skipped, and fails where QMETER_REQUIRE_REAL is set."""
+    if contents is not None:
+        (tmp_path / "tabla_na.flac").write_bytes(contents)
+    monkeypatch.setattr(conftest, "REAL_FOLDERS", (tmp_path,))
+    monkeypatch.delenv("QMETER_REQUIRE_REAL", raising=False)
+    with pytest.raises(pytest.skip.Exception, match=r"tabla_na\.flac of the Debian package sonic-pi-samples is missing"):
+        conftest.real_path("tabla_na.flac")
+    assert "MISSING" in conftest.pytest_report_header()
+    monkeypatch.setenv("QMETER_REQUIRE_REAL", "1")
+    with pytest.raises(pytest.fail.Exception, match="QMETER_REQUIRE_REAL is set"):
+        conftest.real_path("tabla_na.flac")
