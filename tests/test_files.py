@@ -536,6 +536,17 @@ def test_a_named_pipe_is_read(tmp_path: Path) -> None:
         assert writer.wait(timeout=10) == 0
 
 
+def test_the_caf_decoder_does_not_write_to_the_screen(tmp_path: Path) -> None:
+    """A damaged packet table in CAF makes the C decoder write to stdout, where JSON may be expected."""
+    content = bytearray(coded(tmp_path, "CAF", "ALAC_16").read_bytes())
+    sizes = content.index(b"pakt") + 12 + 24  # after the chunk's head and the table's
+    content[sizes : sizes + 6] = b"\xff" * 6
+    path = save(tmp_path, bytes(content))
+    noisy = piped(b"", str(path), script="import soundfile, sys; soundfile.SoundFile(sys.argv[1])")
+    assert "alac_pakt_read_decode" in noisy, "this build is silent, and the check below shows nothing"
+    assert piped(b"", str(path)).startswith("no-samples ")
+
+
 def test_the_mp3_decoder_does_not_write_to_the_screen(tmp_path: Path) -> None:
     """A damaged MP3 makes the C decoder write notes to stderr; `piped` fails if one gets through."""
     content = coded(tmp_path, "MP3", "MPEG_LAYER_III", 3.0).read_bytes()

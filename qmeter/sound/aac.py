@@ -48,6 +48,8 @@ def _decode_track(opened: Any, track: Any, name: str, file_bytes: int, from_s: f
     """Decode one track from the start (AAC seeks to whole packets only), and keep the part asked for."""
     import av
 
+    if track.codec_context is None:  # PyAV then gives the track no rate either
+        raise RecordingError(f"{name} holds sound in a coding that FFmpeg does not know. Export it as WAV or FLAC.", code="unreadable")
     rate = check_rate(track.rate or 0, name)
     channels = int(track.channels)
     check_channels(channels, name)

@@ -31,6 +31,7 @@ _BITS |= {f"ALAC_{bits}": bits for bits in (16, 20, 24, 32)}
 _NEEDS_FLOAT64 = ("PCM_32", "DOUBLE", "ALAC_32")
 """float32 holds 24 bits exactly, and nothing longer."""
 _SEEKS_EXACTLY = ("WAV", "WAVEX", "RF64", "W64", "AIFF", "CAF", "FLAC")
+_TALKATIVE = ("MP3", "CAF")
 _BLOCK_SAMPLES = 1 << 16
 
 
@@ -119,7 +120,7 @@ def decode(file: BinaryIO, name: str, file_bytes: int, container: str, from_s: f
     file.seek(0)
     # A descriptor keeps the decoder from guessing by the file's name; Windows cannot hand one over between C libraries.
     handle: Any = file.fileno() if os.name == "posix" else file
-    with _muffled(container == "MP3"):
+    with _muffled(container in _TALKATIVE):
         try:
             opened = soundfile.SoundFile(handle, closefd=False)
         except (soundfile.SoundFileError, RuntimeError, ValueError, TypeError, OSError) as error:
@@ -230,20 +231,17 @@ def _reason(error: Exception) -> str:
 
 @contextlib.contextmanager
 def _muffled(needed: bool) -> Iterator[None]:
-    """Keep the MP3 decoder's own notes, which its C code writes to the process's stderr, off the user's screen."""
+    """Keep the decoders' own notes off stdout and stderr: C code writes them, past Python, when it meets damage in MP3 or CAF."""
     if not needed:
         yield
         return
-    try:
-        kept = os.dup(2)
-    except OSError:  # stderr is closed: nothing to keep quiet
-        yield
-        return
-    try:
+    with contextlib.ExitStack() as undo:
         null = os.open(os.devnull, os.O_WRONLY)
-        os.dup2(null, 2)
-        os.close(null)
+        undo.callback(os.close, null)
+        for descriptor in (1, 2):
+            with contextlib.suppress(OSError):  # it is closed: nothing to keep quiet
+                kept = os.dup(descriptor)
+                undo.callback(os.close, kept)
+                undo.callback(os.dup2, kept, descriptor)
+                os.dup2(null, descriptor)
         yield
-    finally:
-        os.dup2(kept, 2)
-        os.close(kept)
