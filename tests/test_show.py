@@ -281,6 +281,20 @@ def test_a_doubt_is_said_once() -> None:
     assert words.gather((), modes)[0].about == "every mode"
 
 
+def test_brief_doubts_are_one_sentence_a_code() -> None:
+    """The table gives the strongest mode's words and names the others; plain text gives each its own words."""
+    modes = [
+        fakes.mode(hertz, 50.0, level_db=level, doubts=(Doubt("curved-decay", f"Curved by {dip} dB."),))
+        for hertz, level, dip in ((100.0, -9.0, 1), (200.0, 0.0, 2), (300.0, -3.0, 3))
+    ]
+    brief = words.gather((), modes, [("strike 1", fakes.CLIPPED), ("strike 2", fakes.CLIPPED)], brief=True)
+    assert [(each.about, each.says) for each in brief] == [
+        (words.short_hz(modes[1]), f"Curved by 2 dB. Likewise {words.short_hz(modes[0])} and {words.short_hz(modes[2])}."),
+        ("strike 1 and strike 2", fakes.CLIPPED.says),
+    ]
+    assert len(words.gather((), modes)) == 3
+
+
 def test_long_lists_are_cut() -> None:
     """Forty modes with one doubt are not forty frequencies."""
     assert words.listed(["a"]) == "a"

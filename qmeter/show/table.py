@@ -21,14 +21,14 @@ def render_measurement(measurement: Measurement, width: int, *, view: Look | Non
     """One recording, at most `width` cells wide; `a4_hz` adds notes."""
     view = view or Look()
     above = [*_sentence(words.title(measurement), width, view, look.FIGURE), *_sentence(words.strikes(measurement), width, view)]
-    return _page(above, measurement.modes, words.doubts(measurement), width, view, a4_hz)
+    return _page(above, measurement.modes, words.doubts(measurement, brief=True), width, view, a4_hz)
 
 
 def render_pooled(pooled: Pooled, width: int, *, view: Look | None = None, a4_hz: float | None = None) -> Text:
     """Several recordings as strikes of one object."""
     view = view or Look()
     above = _sentence(words.pooled_title(pooled.files, pooled.mountings), width, view, look.FIGURE)
-    return _page(above, pooled.modes, words.gather(pooled.doubts, pooled.modes), width, view, a4_hz)
+    return _page(above, pooled.modes, words.gather(pooled.doubts, pooled.modes, brief=True), width, view, a4_hz)
 
 
 def _page(above: list[Text], modes: Sequence[Mode], doubts: Sequence[Said], width: int, view: Look, a4_hz: float | None) -> Text:

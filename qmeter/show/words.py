@@ -64,29 +64,45 @@ def _reason(strike: Strike) -> str:
     return ", ".join(dict.fromkeys(doubt.code.replace("-", " ") for doubt in strike.doubts)) or "not like the others"
 
 
-def doubts(measurement: Measurement) -> tuple[Said, ...]:
-    """Every doubt once: on the whole recording, on strikes, on modes (named by frequency, low to high)."""
+def doubts(measurement: Measurement, *, brief: bool = False) -> tuple[Said, ...]:
+    """Every doubt once: on the whole recording, on modes (named by frequency), on strikes."""
     about_strikes = [(f"strike {number}", doubt) for number, strike in enumerate(measurement.strikes, 1) for doubt in strike.doubts]
-    return gather(measurement.doubts, measurement.modes, about_strikes)
+    return gather(measurement.doubts, measurement.modes, about_strikes, brief=brief)
 
 
-def gather(whole: Iterable[Doubt], modes: Sequence[Mode], others: Iterable[tuple[str, Doubt]] = ()) -> tuple[Said, ...]:
-    """Doubts of one kind and wording become one sentence; what is said of the whole is not said again of a part."""
+def gather(
+    whole: Iterable[Doubt], modes: Sequence[Mode], others: Iterable[tuple[str, Doubt]] = (), *, brief: bool = False
+) -> tuple[Said, ...]:
+    """Doubts of one wording become one sentence; what is said of the whole is not said again of a part.
+
+    `brief`: doubts of one code become one sentence, that of the strongest mode, with the names of the others after it.
+    """
     said = dict.fromkeys(doubt.says for doubt in whole)
     result = [Said("", says) for says in said]
-    subjects: dict[str, list[str]] = {}
-    ordered = sorted(modes, key=lambda mode: mode.damped_frequency_hz)
-    for mode in ordered:
-        for doubt in mode.doubts:
-            subjects.setdefault(doubt.says, []).append(short_hz(mode))
-    for name, doubt in others:
-        subjects.setdefault(doubt.says, []).append(name)
-    for says, names in subjects.items():
-        if says not in said:
-            unique = list(dict.fromkeys(names))
-            every = len(modes) > 1 and unique == list(dict.fromkeys(map(short_hz, ordered)))
-            result.append(Said("every mode" if every else listed(unique), says))
+    strongest_first = sorted(modes, key=lambda mode: -mode.level_db)
+    about_modes = [(short_hz(mode), doubt) for mode in strongest_first for doubt in mode.doubts]
+    everyone = {short_hz(mode) for mode in modes} if len(modes) > 1 else set()
+    for subjects in (about_modes, list(others)):
+        kinds: dict[str, list[tuple[str, str]]] = {}
+        for name, doubt in subjects:
+            if doubt.says not in said:
+                kinds.setdefault(doubt.code if brief else doubt.says, []).append((name, doubt.says))
+        result += [_one(same, everyone) for same in kinds.values()]
     return tuple(result)
+
+
+def _one(subjects: Sequence[tuple[str, str]], everyone: set[str]) -> Said:
+    """One sentence for all of these: the first one's words, and who else says much the same."""
+    says = subjects[0][1]
+    alike = list(dict.fromkeys(name for name, words in subjects if words == says))
+    rest = list(dict.fromkeys(name for name, words in subjects if words != says and name not in alike))
+    about = "every mode" if set(alike) == everyone else listed(sorted(alike, key=_number))
+    return Said(about, f"{says} Likewise {listed(sorted(rest, key=_number))}." if rest else says)
+
+
+def _number(name: str) -> float:
+    """The number in "184.12 Hz" or "strike 3", to sort by."""
+    return next(float(word) for word in name.split() if word[0].isdigit())
 
 
 def pooled_title(files: Sequence[str], mountings: Sequence[str | None]) -> str:
