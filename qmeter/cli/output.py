@@ -10,7 +10,7 @@ from typing import Protocol
 from rich.console import Console
 from rich.text import Text
 
-import qmeter
+from qmeter import __version__
 from qmeter.cli.batch import Outcome
 from qmeter.cli.request import Request
 from qmeter.errors import UsageError
@@ -88,7 +88,7 @@ class Document:
     def finish(self, outcomes: Sequence[Outcome], pooled: Pooled | None) -> None:
         """Print it."""
         failures = [outcome.failure for outcome in outcomes if outcome.failure is not None]
-        emit(document.as_json(document.document(qmeter.__version__, measured(outcomes), failures, pooled)) + "\n")
+        emit(document.as_json(document.document(__version__, measured(outcomes), failures, pooled)) + "\n")
         if self._picture is not None:
             self._picture.save(outcomes, pooled)
 
