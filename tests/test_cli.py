@@ -355,6 +355,34 @@ def test_interrupted(folder: Path, runner: list[str], jobs: str) -> None:
     assert b"Traceback" not in err
 
 
+@pytest.mark.skipif(sys.platform == "win32", reason="needs a pseudo-terminal")
+def test_progress_is_shown_on_a_terminal_only(folder: Path, runner: list[str]) -> None:
+    """A bar on stderr when that is a terminal, and still nothing but data on stdout."""
+    import pty
+
+    ours, theirs = pty.openpty()
+    environment = {**os.environ, "TERM": "xterm-256color", "COLUMNS": "80"}
+    with subprocess.Popen([*runner, "plate.wav", "bar.wav", "--json"], stdout=subprocess.PIPE, stderr=theirs, env=environment) as process:
+        os.close(theirs)
+        assert process.stdout is not None
+        result = json.loads(process.stdout.read())
+        seen = b""
+        while chunk := _read(ours):
+            seen += chunk
+    os.close(ours)
+    assert [recording["file"] for recording in result["recordings"]] == ["plate.wav", "bar.wav"]
+    assert b"measuring" in seen and b"2/2" in seen
+    assert process.returncode == 0
+
+
+def _read(terminal: int) -> bytes:
+    """What there is to read; nothing when the other end is closed."""
+    try:
+        return os.read(terminal, 4096)
+    except OSError:
+        return b""
+
+
 def test_a_lost_process_is_said(folder: Path, runner: list[str]) -> None:
     """A worker that is killed costs its file, not the program's composure."""
     write_wav(folder / "die.wav")

@@ -244,6 +244,18 @@ def test_beats_of_a_close_pair_only() -> None:
     assert not pitch.beats(fakes.bar().modes)
 
 
+def test_beats_of_many_pairs() -> None:
+    """A bell of many pairs shows the three loudest, in the order of the table, and says how many more; --pitch shows all."""
+    levels = (-30.0, -10.0, -20.0, 0.0, -40.0)
+    modes = [
+        fakes.mode(hertz, 900.0, level_db=level) for n, level in enumerate(levels) for hertz in (500.0 * (n + 1), 500.0 * (n + 1) + 0.5)
+    ]
+    said = words.beats(modes, all_of_them=False)
+    assert [sentence.split(".")[0] for sentence in said[:3]] == ["1000", "1500", "2000"]
+    assert said[3] == "2 more close pairs, weaker than these: --pitch 440 shows all"
+    assert len(words.beats(modes, all_of_them=True)) == 5
+
+
 # ---- sentences ----
 
 

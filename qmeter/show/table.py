@@ -8,7 +8,7 @@ from collections.abc import Iterable, Sequence
 from rich.text import Text
 
 from qmeter.estimate.modes import Measurement, Mode
-from qmeter.show import columns, look, pitch, words
+from qmeter.show import columns, look, words
 from qmeter.show.document import Pooled
 from qmeter.show.look import Look
 from qmeter.show.words import Said
@@ -37,9 +37,11 @@ def _page(above: list[Text], modes: Sequence[Mode], doubts: Sequence[Said], widt
         lines += [Text(""), *table(modes, width, view=view, a4_hz=a4_hz), Text("")]
     else:
         lines += _sentence("no mode found", width, view)
-    for beat in pitch.beats(modes):
-        lines += _hanging("~", look.LINE, "", words.beat(beat), width, view)
+    for beat in words.beats(modes, all_of_them=a4_hz is not None):
+        lines += _hanging("~", look.LINE, "", beat, width, view)
     lines += sentences(doubts, width, view)
+    while lines and not lines[-1].plain:
+        lines.pop()
     return Text("\n", no_wrap=True, end="\n").join(lines)
 
 

@@ -7,9 +7,10 @@ from dataclasses import dataclass
 from pathlib import PurePath
 
 from qmeter.estimate.modes import Doubt, Measurement, Mode, Strike
-from qmeter.show.pitch import Beat
+from qmeter.show import pitch
 from qmeter.uncertainty import format_figure, format_value_u95
 
+_LOUDEST_PAIRS = 3
 _NAMED_AT_MOST = 6
 """modes or strikes that one sentence lists by name"""
 
@@ -113,6 +114,11 @@ def pooled_title(files: Sequence[str], mountings: Sequence[str | None]) -> str:
     return f"pooled over {len(files)} {'file' if len(files) == 1 else 'files'}, {held}"
 
 
-def beat(pair: Beat) -> str:
-    """How fast two close modes beat."""
-    return f"{short_hz(pair.lower)} and {short_hz(pair.upper)} beat {format_figure(pair.per_second)} times a second"
+def beats(modes: Sequence[Mode], *, all_of_them: bool) -> list[str]:
+    """How fast close modes beat, a sentence a pair; else the loudest pairs only, and how many more there are."""
+    pairs = pitch.beats(modes)
+    loudest = sorted(pairs, key=lambda pair: -min(pair.lower.level_db, pair.upper.level_db))[:_LOUDEST_PAIRS]
+    shown = [pair for pair in pairs if all_of_them or pair in loudest]
+    said = [f"{short_hz(pair.lower)} and {short_hz(pair.upper)} beat {format_figure(pair.per_second)} times a second" for pair in shown]
+    more = len(pairs) - len(shown)
+    return said if not more else [*said, f"{more} more close {'pair' if more == 1 else 'pairs'}, weaker than these: --pitch 440 shows all"]
