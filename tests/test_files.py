@@ -291,6 +291,26 @@ def test_a_truncated_packed_file_is_read_as_far_as_it_goes(tmp_path: Path, conta
     assert f"{cut.duration_s:.6g} s of 4 s promised could be decoded" in doubt.says
 
 
+@pytest.mark.parametrize("subtype", ["VORBIS", "OPUS"])
+def test_what_is_missing_from_ogg_is_said(tmp_path: Path, subtype: str) -> None:
+    """The decoder joins what is left without a word; the page numbers and the end mark tell, wherever the piece was taken out."""
+    content = coded(tmp_path, "OGG", subtype, seconds=6.0).read_bytes()
+    pages = [place for place in range(len(content)) if content[place : place + 4] == b"OggS"]
+    assert len(pages) > 5
+    lost = {
+        "its last page is cut off": content[:-10],
+        "its pages break off": content[: pages[-1] + 20],
+        "its last page is missing": content[: pages[-1]],
+        "pages are missing before page 4": content[: pages[3]] + content[pages[4] :],
+    }
+    for says, left in lost.items():
+        recording = Recording.load(save(tmp_path, left))
+        doubts = [doubt.says for doubt in recording.doubts if doubt.code == "truncated"]
+        assert len(doubts) == 1 and (says in doubts[0] or "could be decoded" in doubts[0]), (says, doubts)
+    sound = Recording.load(save(tmp_path, content))
+    assert [doubt.code for doubt in sound.doubts] == ["lossy"]
+
+
 def test_a_damaged_flac_is_read_up_to_the_damage(tmp_path: Path) -> None:
     """A hole in the middle: nothing after it is passed off as sound, and what comes before is exact."""
     path = coded(tmp_path, "FLAC", "PCM_16", seconds=4.0)
@@ -558,11 +578,11 @@ def test_the_mp3_decoder_does_not_write_to_the_screen(tmp_path: Path) -> None:
 # --- AAC
 
 
-def aac_file(folder: Path, container: str, codec: str = "aac") -> Path:
+def aac_file(folder: Path, container: str, codec: str = "aac", options: dict[str, str] | None = None) -> Path:
     """A tone as M4A or ADTS, written by FFmpeg."""
     av = pytest.importorskip("av", reason="the extra `aac` is not installed")
     path = folder / "telephone.wav"  # AAC renamed .wav, as mail programs do
-    with av.open(str(path), "w", format=container) as output:
+    with av.open(str(path), "w", format=container, options=options or {}) as output:
         track = output.add_stream(codec, rate=RATE_HZ, layout="mono")
         frame = av.AudioFrame.from_ndarray(tone(2.0).astype(np.float32)[None, :], format="fltp", layout="mono")
         frame.sample_rate = RATE_HZ
@@ -586,6 +606,17 @@ def test_aac_is_read_whatever_it_is_called(tmp_path: Path, container: str, shown
     part = Recording.load(path, from_s=0.5, to_s=1.25)
     assert_array_equal(part.samples, recording.between(0.5, 1.25).samples)
     assert refusal(path, from_s=9.0).code == "outside"
+
+
+def test_a_truncated_m4a_is_read_as_far_as_it_goes(tmp_path: Path) -> None:
+    """With the index in front and half the sound gone, the rest is read and doubted; with the index behind it nothing can be."""
+    content = aac_file(tmp_path, "mp4", options={"movflags": "+faststart"}).read_bytes()
+    whole = Recording.load(save(tmp_path, content))
+    cut = Recording.load(save(tmp_path, content[: len(content) * 6 // 10]))
+    assert 0.2 * whole.frames < cut.frames < 0.8 * whole.frames
+    assert sorted(doubt.code for doubt in cut.doubts) == ["lossy", "truncated"]
+    behind = aac_file(tmp_path, "mp4").read_bytes()
+    assert refusal(save(tmp_path, behind[: len(behind) * 6 // 10])).code == "unreadable"
 
 
 def test_apple_lossless_carries_no_doubt(tmp_path: Path) -> None:

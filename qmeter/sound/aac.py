@@ -12,6 +12,8 @@ from qmeter.sound.decode import Decoded, Sink, check_channels, open_span
 
 _DEMUXERS = {"M4A": "mp4", "ADTS": "aac"}
 """Named, so that a file cannot pass for a playlist or any other of the hundreds that FFmpeg knows."""
+_PACKET_FRAMES = 2048
+"""of AAC, the longer kind"""
 _LOSSLESS = ("alac", "flac")
 
 
@@ -75,9 +77,12 @@ def _decode_track(opened: Any, track: Any, name: str, file_bytes: int, from_s: f
             code="unreadable" if trouble else "no-samples",
         )
     if stop is None or seen < stop:
+        promised = round(float(track.duration * track.time_base) * rate) if track.duration and container_name(opened) == "M4A" else 0
+        if promised - seen > 2 * _PACKET_FRAMES and trouble is None:  # the coder's delay is part of one length and not of the other
+            trouble = f"{promised / rate:.6g} s are promised, and the file ends there."
         span_frames(from_s, to_s, seen, rate, name)  # says so where the part asked for lies outside
     if trouble:
-        trouble = f"{sink.frames / rate:.6g} s could be decoded: {trouble}"
+        trouble = f"{seen / rate:.6g} s could be decoded: {trouble}"
     codec = str(track.codec_context.name)
     return Decoded(sink.finish(), rate, first, container_name(opened), codec.upper(), None, codec not in _LOSSLESS, trouble)
 

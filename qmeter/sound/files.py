@@ -49,6 +49,7 @@ class Recording(pure.Recording):
             digest, size, head = _digest(file, name)
             container = _recognise(head, size, name)
             promise = headers.sound_chunk(file, container, size)
+            ogg_fault = headers.ogg_fault(file, size) if container == "OGG" else None
             _check_header(head, promise, name)
             read = decode_aac if container in headers.AAC_CONTAINERS else decode
             try:
@@ -60,7 +61,7 @@ class Recording(pure.Recording):
             decoded.samples,
             decoded.rate,
             origin=origin,
-            doubts=_doubts(decoded, promise, name),
+            doubts=_doubts(decoded, promise, ogg_fault, name),
             starts_at_s=decoded.first_frame / decoded.rate,
         )
 
@@ -194,7 +195,7 @@ def _cut_header(promise: headers.SoundChunk | None, name: str) -> RecordingError
     )
 
 
-def _doubts(decoded: Decoded, promise: headers.SoundChunk | None, name: str) -> tuple[SourceDoubt, ...]:
+def _doubts(decoded: Decoded, promise: headers.SoundChunk | None, ogg_fault: str | None, name: str) -> tuple[SourceDoubt, ...]:
     """What speaks against the samples as they came."""
     doubts = []
     if decoded.lossy:
@@ -205,8 +206,10 @@ def _doubts(decoded: Decoded, promise: headers.SoundChunk | None, name: str) -> 
                 "early or in steps. Record to WAV or FLAC where you can.",
             )
         )
-    if decoded.cut_short:
-        doubts.append(SourceDoubt("truncated", f"{name} is cut short or damaged: {decoded.cut_short} Copy it again if the rest matters."))
+    if decoded.cut_short or ogg_fault:
+        doubts.append(
+            SourceDoubt("truncated", f"{name} is cut short or damaged: {decoded.cut_short or ogg_fault} Copy it again if the rest matters.")
+        )
     elif promise is not None and promise.promised_bytes is not None and promise.promised_bytes > promise.present_bytes + 1:
         doubts.append(
             SourceDoubt(

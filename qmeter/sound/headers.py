@@ -88,6 +88,27 @@ def sound_chunk(file: BinaryIO, container: str, size: int) -> SoundChunk | None:
     return None
 
 
+def ogg_fault(file: BinaryIO, size: int) -> str | None:
+    """What is missing from an OGG file, as a clause, after the numbers and the end mark of its pages (RFC 3533, 6); None: nothing.
+
+    libsndfile takes the last page it finds for the end, and joins what is left around a gap without a word.
+    """
+    place, next_number, ended = 0, dict[int, int](), False
+    while place < size:
+        head = _at(file, place, 27)
+        if len(head) < 27 or head[:4] != b"OggS":
+            return "its pages break off in the middle of one."
+        flags, serial, number, segments = head[5], *struct.unpack("<II", head[14:22]), head[26]
+        if number != next_number.setdefault(serial, number):
+            return f"pages are missing before page {number}."
+        next_number[serial] = number + 1
+        ended = bool(flags & 4)
+        place += 27 + segments + sum(_at(file, place + 27, segments))
+    if place > size:
+        return "its last page is cut off."
+    return None if ended else "its last page is missing."
+
+
 def _at(file: BinaryIO, place: int, count: int) -> bytes:
     file.seek(place)
     return file.read(count)

@@ -278,7 +278,7 @@ def report(seed: int, count: int) -> int:
     slowest = max(outcomes, key=lambda outcome: outcome.seconds)
     print(f"\nseed {seed}: {len(outcomes)} mutations in {time.monotonic() - start:.0f} s; slowest {slowest.seconds:.2f} s", end="")
     print(
-        f" (number {slowest.number}); resident memory {min(resident_kb) / 1024:.0f} MB undamaged, {max(resident_kb) / 1024:.0f} MB at most\n"
+        f" (number {slowest.number}); resident memory {min(resident_kb) / 1024:.0f} MB undamaged, {max(resident_kb) / 1024:.0f} at most\n"
     )
     bad = [outcome for outcome in outcomes if not outcome.allowed]
     for outcome in bad:
