@@ -267,5 +267,5 @@ def _slope(samples: Complex, pole: complex, step_s: float, noise: float, levels:
         pole += move if abs(move) < 1.0 / samples.size else move / abs(move) / samples.size
         if abs(move) * samples.size < 1e-3:
             break
-    u = math.sqrt(0.5 * noise / float(weight @ away**2)) / abs(mean) / step_s
+    u = math.sqrt(0.5 * noise / float(weight @ away**2)) / float(abs(mean)) / step_s
     return Slope(*levels, -pole.real / step_s, u, pole.imag / (2.0 * math.pi * step_s), u / (2.0 * math.pi))

@@ -6,7 +6,6 @@ their covariance. Rows come in few sizes, so that most of them share one batch.
 
 from __future__ import annotations
 
-from collections.abc import Callable
 from dataclasses import dataclass
 
 import numpy as np
@@ -174,17 +173,27 @@ def fit_groups(ring: Ring, poles: Poles, groups: list[IntArray], starts: IntArra
     return out
 
 
-def moved(poles: Poles, fits: list[GroupFit], accept: Callable[[GroupFit], np.ndarray] | None = None) -> Poles:
-    """The poles after these fits (rows where `accept` is false stay)."""
+def moved(poles: Poles, fits: list[GroupFit], loudest: float, steady_decay: float) -> tuple[Poles, np.ndarray]:
+    """The poles after these fits, without those whose fit says nothing.
+
+    Dropped at once, before they are subtracted and spoil their neighbours' bins: decay rates that the fit itself cannot tell from
+    zero within a factor of two, amplitudes several times the loudest sample, lines that ran far from where they were seen.
+    """
     s, c = poles.pole.copy(), poles.amplitude.copy()
+    keep = np.zeros(len(poles), bool)
     for g in fits:
-        ok = np.isfinite(g.fit.pole).all(axis=1) & np.isfinite(g.fit.amplitude).all(axis=1)
-        if accept is not None:
-            ok &= accept(g)
-        m = g.batch.members[ok]
-        s[m] = g.fit.pole[ok]
-        c[m] = g.fit.amplitude[ok] * np.exp(-g.fit.pole[ok] * g.batch.start[ok][:, None])
-    return Poles(s, c)
+        m = g.batch.members
+        new = g.fit.pole
+        with np.errstate(all="ignore"):
+            amplitude = g.fit.amplitude * np.exp(-new * g.batch.start[:, None])
+            decay = -new.real
+            u = np.sqrt(np.diagonal(g.fit.covariance, axis1=1, axis2=2)[:, 0::2])
+            ran = np.abs(new.imag - poles.pole[m].imag) > 4.0 * np.maximum(decay, -poles.pole[m].real) + 12.0 / g.batch.rows.length[:, None]
+            told = (u < 0.5 * decay) | (decay < steady_decay)
+            good = told & ~ran & (np.abs(amplitude) < 3.0 * loudest) & np.isfinite(amplitude) & (decay > 0)
+        s[m[good]], c[m[good]] = new[good], amplitude[good]
+        keep[m[good]] = True
+    return Poles(s[keep], c[keep]), keep
 
 
 def rest_of(ring: Ring, poles: Poles) -> FloatArray:

@@ -11,6 +11,7 @@ import math
 from collections.abc import Sequence
 from dataclasses import dataclass
 from statistics import median
+from typing import NamedTuple
 
 import numpy as np
 import numpy.typing as npt
@@ -23,7 +24,7 @@ _DRIFT_WIDTHS = 0.35, 1.0
 """by how many half-power widths a mode may move between strikes of one mounting, and between mountings"""
 _DRIFT_OF_FREQUENCY = 1e-4, 2e-3
 """or by how much of its frequency (a few degrees, another support), whichever is more; modes of high Q are narrower than that"""
-_DECAY_FACTOR = 1.6, 2.5
+_DECAY_FACTOR = 2.2, 3.0
 """by which factor the decay rate may differ, in one mounting and between mountings, beyond the joint u95"""
 _WIDEST_U95_WIDTHS = 1.0
 """a frequency less certain than this is not matched further away for it"""
@@ -31,12 +32,27 @@ _UNMATCHED = 0.8
 """cost of leaving one mode without a partner; a partner at the edge of what is allowed costs 1.5, so two matches go before one"""
 
 
+class _Read(NamedTuple):
+    """A mode as one strike read it, with the numbers that matter here; u from fit and model."""
+
+    frequency: float
+    decay: float
+    u_frequency: float
+    u_decay: float
+    mode: Mode | None = None
+
+
 @dataclass(slots=True)
 class Group:
     """One mode of the object: by the number of the strike, what each read. `splits`: strikes that read it as two."""
 
-    modes: dict[int, Mode]
+    reads: dict[int, _Read]
     splits: int = 0
+
+    @property
+    def modes(self) -> dict[int, Mode]:
+        """By the number of the strike, in their order."""
+        return {strike: read.mode for strike, read in sorted(self.reads.items()) if read.mode is not None}
 
 
 def match(readings: Sequence[Sequence[Mode]], mountings: Sequence[int]) -> list[Group]:
@@ -45,39 +61,46 @@ def match(readings: Sequence[Sequence[Mode]], mountings: Sequence[int]) -> list[
     `readings`: the modes of each strike; `mountings`: the number of each strike's mounting. Starts from the strike with the most modes;
     then each strike is assigned again to what all the others agree on, so that the order of the strikes does not matter much.
     """
-    readings = [sorted(modes, key=lambda mode: mode.damped_frequency_hz) for modes in readings]
+    all_reads = [sorted(map(_read, modes), key=lambda read: read.frequency) for modes in readings]
     order = sorted(range(len(readings)), key=lambda strike: -len(readings[strike]))
     groups: list[Group] = []
     for strike in order:
-        _assign(groups, strike, readings[strike], mountings)
+        _assign(groups, strike, all_reads[strike], mountings)
     for _ in range(2 if len(readings) > 2 else 0):
-        before = [dict(group.modes) for group in groups]
+        before = [dict(group.reads) for group in groups]
         for strike in order:
             for group in groups:
-                group.modes.pop(strike, None)
-            groups = [group for group in groups if group.modes]
-            _assign(groups, strike, readings[strike], mountings)
-        if [group.modes for group in groups] == before:
+                group.reads.pop(strike, None)
+            groups = [group for group in groups if group.reads]
+            _assign(groups, strike, all_reads[strike], mountings)
+        if [group.reads for group in groups] == before:
             break
     return _settle_splits(groups)
 
 
-def _assign(groups: list[Group], strike: int, modes: Sequence[Mode], mountings: Sequence[int]) -> None:
+def _read(mode: Mode) -> _Read:
+    parts = [mode.budget[name] for name in ("fit", "model") if name in mode.budget]
+    u_f = math.sqrt(sum(part.frequency_variance for part in parts))
+    u_a = math.sqrt(sum(part.decay_variance for part in parts))
+    return _Read(mode.damped_frequency_hz, mode.amplitude_decay_rate_per_s, u_f, u_a, mode)
+
+
+def _assign(groups: list[Group], strike: int, reads: Sequence[_Read], mountings: Sequence[int]) -> None:
     """Add the modes of one strike to the groups that they fit best, and found new groups for the rest."""
-    left = set(range(len(modes)))
-    if groups and modes:
-        cost = _costs(groups, strike, modes, mountings)
+    left = set(range(len(reads)))
+    if groups and reads:
+        cost = _costs(groups, strike, reads, mountings)
         for row, column in _best(cost):
-            groups[column].modes[strike] = modes[row]
+            groups[column].reads[strike] = reads[row]
             left.discard(row)
-    groups += [Group({strike: modes[row]}) for row in sorted(left)]
+    groups += [Group({strike: reads[row]}) for row in sorted(left)]
 
 
-def _costs(groups: Sequence[Group], strike: int, modes: Sequence[Mode], mountings: Sequence[int]) -> Array:
-    """(modes, groups): squared distance in units of what is allowed, 1 in frequency and a half in decay; infinite beyond it."""
-    frequency, decay, u_f, u_a = _numbers(modes)
-    middle = np.array([_centre(group, mountings[strike], mountings) for group in groups]).T
-    own = np.array([any(mountings[other] == mountings[strike] for other in group.modes) for group in groups])
+def _costs(groups: Sequence[Group], strike: int, reads: Sequence[_Read], mountings: Sequence[int]) -> Array:
+    """(reads, groups): squared distance in units of what is allowed, 1 in frequency and a half in decay; infinite beyond it."""
+    frequency, decay, u_f, u_a = np.array([read[:4] for read in reads]).T
+    middle = np.array([_centre(group, mountings[strike], mountings)[:4] for group in groups]).T
+    own = np.array([any(mountings[other] == mountings[strike] for other in group.reads) for group in groups])
     width = np.maximum(decay[:, None], middle[1]) / math.pi
     drift_widths, drift_relative, factor = (np.where(own, *pair)[None, :] for pair in (_DRIFT_WIDTHS, _DRIFT_OF_FREQUENCY, _DECAY_FACTOR))
     joint_f = 2.0 * np.minimum(np.hypot(u_f[:, None], middle[2]), 0.5 * _WIDEST_U95_WIDTHS * width)
@@ -89,25 +112,17 @@ def _costs(groups: Sequence[Group], strike: int, modes: Sequence[Mode], mounting
     return np.where((away_f <= 1.0) & (away_a <= 1.0), away_f**2 + 0.5 * away_a**2, np.inf)
 
 
-def _numbers(modes: Sequence[Mode]) -> Array:
-    """(4, modes): frequency, decay rate, and their standard uncertainties from fit and model."""
-    rows = []
-    for mode in modes:
-        parts = [mode.budget[name] for name in ("fit", "model") if name in mode.budget]
-        u_f = math.sqrt(sum(part.frequency_variance for part in parts))
-        u_a = math.sqrt(sum(part.decay_variance for part in parts))
-        rows.append((mode.damped_frequency_hz, mode.amplitude_decay_rate_per_s, u_f, u_a))
-    return np.array(rows).reshape(-1, 4).T
+def _middle(reads: Sequence[_Read]) -> _Read:
+    """Medians over several readings of one mode."""
+    if len(reads) == 1:
+        return reads[0]
+    frequency, decay, u_frequency, u_decay, _ = zip(*reads, strict=True)
+    return _Read(median(frequency), median(decay), median(u_frequency), median(u_decay))
 
 
-def _middle(modes: Sequence[Mode]) -> list[float]:
-    """Medians over several readings of one mode: frequency, decay rate, and their standard uncertainties."""
-    return [median(row) for row in _numbers(modes).tolist()]
-
-
-def _centre(group: Group, mounting: int, mountings: Sequence[int]) -> list[float]:
+def _centre(group: Group, mounting: int, mountings: Sequence[int]) -> _Read:
     """Where a group lies: its middle over the strikes in this mounting, or over all when it has none there."""
-    return _middle([mode for strike, mode in group.modes.items() if mountings[strike] == mounting] or list(group.modes.values()))
+    return _middle([read for strike, read in group.reads.items() if mountings[strike] == mounting] or list(group.reads.values()))
 
 
 def _best(cost: Array) -> list[tuple[int, int]]:
@@ -145,14 +160,14 @@ def _settle_splits(groups: list[Group]) -> list[Group]:
     the other half of a needless split: dropped, and counted.
     """
     result: list[Group] = []
-    for group in sorted(groups, key=lambda group: -len(group.modes)):
+    for group in sorted(groups, key=lambda group: -len(group.reads)):
         dropped = False
         for other in (other for other in result if _beside(group, other)):
-            both = group.modes.keys() & other.modes.keys()
-            if 2 * len(both) > len(group.modes.keys() | other.modes.keys()):
+            both = group.reads.keys() & other.reads.keys()
+            if 2 * len(both) > len(group.reads.keys() | other.reads.keys()):
                 _leave_out_blends(group, other)
                 _leave_out_blends(other, group)
-            elif len(both) == len(group.modes):
+            elif len(both) == len(group.reads):
                 other.splits = max(other.splits, len(both))
                 dropped = True
                 break
@@ -163,16 +178,16 @@ def _settle_splits(groups: list[Group]) -> list[Group]:
 
 def _beside(group: Group, other: Group) -> bool:
     """Within one half-power width of the broader."""
-    (f1, a1, _, _), (f2, a2, _, _) = _middle(list(group.modes.values())), _middle(list(other.modes.values()))
-    return abs(f1 - f2) < max(a1, a2) / math.pi
+    one, two = _middle(list(group.reads.values())), _middle(list(other.reads.values()))
+    return abs(one.frequency - two.frequency) < max(one.decay, two.decay) / math.pi
 
 
 def _leave_out_blends(group: Group, other: Group) -> None:
     """Drop from `group` the strikes that lack `other` and lie off the rest towards it, by more than their joint u95."""
-    centre, _, u_centre, _ = _middle([mode for strike, mode in group.modes.items() if strike in other.modes])
-    towards = _middle(list(other.modes.values()))[0] - centre
-    for strike in [strike for strike in group.modes if strike not in other.modes]:
-        frequency, _, u_f, _ = _middle([group.modes[strike]])
-        away = frequency - centre
-        if away * towards > 0.0 and abs(away) > 2.0 * math.hypot(u_f, u_centre):
-            del group.modes[strike]
+    centre = _middle([read for strike, read in group.reads.items() if strike in other.reads])
+    towards = _middle(list(other.reads.values())).frequency - centre.frequency
+    for strike in [strike for strike in group.reads if strike not in other.reads]:
+        read = group.reads[strike]
+        away = read.frequency - centre.frequency
+        if away * towards > 0.0 and abs(away) > 2.0 * math.hypot(read.u_frequency, centre.u_frequency):
+            del group.reads[strike]

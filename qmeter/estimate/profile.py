@@ -12,7 +12,7 @@ import numpy as np
 import scipy.fft
 
 from qmeter.dsp.noise import FloatArray, fast_length
-from qmeter.estimate.find import Ring
+from qmeter.estimate.find import Poles, Ring
 from qmeter.estimate.poles import ComplexArray
 
 _BAND_RATIO = 0.45
@@ -20,6 +20,10 @@ _BAND_LEAST_HZ = 600.0
 _COARSE = 0.12
 """a band's sample longer than this many time constants cannot tell where in a mode's life the residual stands"""
 _BROAD_S = 0.5
+_CLEAR_WIDTHS = 3.0
+"""half-power widths either side of a mode that its own misfit may fill"""
+_CLEAR_SHARE = 0.4
+"""share of a band's bins that must be left for the others to speak for it"""
 
 
 @dataclass(frozen=True, slots=True)
@@ -54,13 +58,18 @@ class Profiles:
         return self.broad if band.step_s * decay_rate_per_s > _COARSE else band
 
 
-def profiles(ring: Ring, rest: FloatArray) -> Profiles:
-    """Whitened analytic envelope power of the residual in overlapping bands, cumulated over time."""
+def profiles(ring: Ring, rest: FloatArray, poles: Poles) -> Profiles:
+    """Whitened analytic envelope power of the residual in overlapping bands, cumulated over time.
+
+    Bins close to a mode are left out where enough others remain: what stands there is that mode's own misfit, and a misfit (an
+    unresolved pair, say) must not be taken for a knock that lasts.
+    """
     n = fast_length(len(rest))
     spectrum: ComplexArray = np.asarray(scipy.fft.rfft(rest[:n]))
     step = ring.rate / n
     hz = np.arange(len(spectrum)) * step
     root = 1.0 / np.sqrt(ring.noise.at(np.maximum(hz, step)) * (n * ring.rate / 2.0))
+    clear = _clear_of(poles, len(spectrum), n)
     bands = []
     centre = 150.0
     while centre < ring.rate / 2:
@@ -68,28 +77,44 @@ def profiles(ring: Ring, rest: FloatArray) -> Profiles:
         lo, hi = int(max(centre - half, ring.low_hz) / step), int(min(centre + half, 0.48 * ring.rate) / step)
         if hi - lo < 16:
             break
-        bands.append(_band(spectrum, root, lo, hi, n / ring.rate, centre))
+        bands.append(_band(spectrum, root, clear, lo, hi, n / ring.rate, centre))
         centre = centre + half if half <= _BAND_LEAST_HZ / 2 else centre * 2**0.5
-    return Profiles(tuple(bands), _broad(ring, rest))
+    return Profiles(tuple(bands), _broad(ring, rest, poles))
 
 
-def _band(spectrum: ComplexArray, root: FloatArray, lo: int, hi: int, duration_s: float, centre: float) -> BandProfile:
+def _clear_of(poles: Poles, bins: int, length: int) -> np.ndarray:
+    """Bins of a spectrum of `length` samples that lie clear of every mode."""
+    clear = np.ones(bins, bool)
+    half = np.maximum(_CLEAR_WIDTHS * -poles.pole.real * length / np.pi, 3.0)
+    at = poles.pole.imag * length / (2 * np.pi)
+    for lo, hi in zip(np.maximum(at - half, 0).astype(int), (at + half + 1).astype(int), strict=True):
+        clear[lo:hi] = False
+    return clear
+
+
+def _band(spectrum: ComplexArray, root: FloatArray, clear: np.ndarray, lo: int, hi: int, duration_s: float, centre: float) -> BandProfile:
     size = scipy.fft.next_fast_len(hi - lo)
     band = np.zeros(size, complex)
     band[: hi - lo] = spectrum[lo:hi] * root[lo:hi]
+    used = hi - lo
+    enough = int(np.count_nonzero(clear[lo:hi]))
+    if enough > _CLEAR_SHARE * used:
+        band[: hi - lo] *= clear[lo:hi]
+        used = enough
     envelope = np.asarray(scipy.fft.ifft(band, overwrite_x=True))
-    power = (envelope.real**2 + envelope.imag**2) * (size**2 / (hi - lo))
+    power = (envelope.real**2 + envelope.imag**2) * (size**2 / used)
     return BandProfile(centre, duration_s / size, np.concatenate([[0.0], np.cumsum(power)]))
 
 
-def _broad(ring: Ring, rest: FloatArray) -> BandProfile:
+def _broad(ring: Ring, rest: FloatArray, poles: Poles) -> BandProfile:
     """The whitened residual of the first half second over the whole band, at twice its bandwidth."""
     n = fast_length(min(len(rest), int(_BROAD_S * ring.rate)))
     spectrum: ComplexArray = np.asarray(scipy.fft.rfft(rest[:n]))
     step = ring.rate / n
     hz = np.arange(len(spectrum)) * step
     root = 1.0 / np.sqrt(ring.noise.at(np.maximum(hz, step)) * (n * ring.rate / 2.0))
-    return _band(spectrum, root, max(int(ring.low_hz / step), 1), int(0.48 * n), n / ring.rate, ring.rate / 4)
+    clear = _clear_of(poles, len(spectrum), n)
+    return _band(spectrum, root, clear, max(int(ring.low_hz / step), 1), int(0.48 * n), n / ring.rate, ring.rate / 4)
 
 
 def best_start(band: BandProfile, decay_rate_per_s: float, starts_s: FloatArray, cell_s: float) -> tuple[int, FloatArray]:

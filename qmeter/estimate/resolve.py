@@ -83,7 +83,7 @@ def proposals(suspect: Suspect) -> dict[int, ComplexArray]:
         s = np.log(z) * (k / n)
         turn = np.mod(s.imag, 2 * np.pi * k / n) + 2 * np.pi * suspect.first_bin / n
         s = -np.clip(-s.real, least, None) + 1j * turn
-        good = (s.real < -least * 1.01) & (-s.real < 8 * np.max(-suspect.pole.real))
+        good = (s.real < -least * 1.01) & (-s.real < 4 * np.max(-suspect.pole.real))
         if good.sum() == p:
             out[p] = s[np.argsort(s.imag)]
     return out

@@ -26,7 +26,8 @@ SAME_WIDTHS = 0.15
 """two poles closer than this many half-power widths, with like decays, are one mode found twice"""
 STEADY = 0.15
 """time constants within the whole ring below which a line is as good as a steady tone"""
-SWEEPS = 5
+SWEEPS = 4
+SPLINTER_WIDTHS = 2.0
 LEAST_ENERGY = 40.0
 """(a/u(a))^2 = rho^2/4 must exceed a tenth of this: rho^2 over the local residual"""
 
@@ -62,31 +63,38 @@ class Settled:
 
 def settle(ring: Ring, poles: Poles, contact: int) -> Settled:
     """Final values of the candidates `poles`; `contact` is the sample at which the contact force has ended."""
-    starts = first_starts(poles, contact)
+    loudest = float(np.max(np.abs(ring.samples), initial=0.0))
+    still = STEADY / len(ring.samples)
+    poles = unshattered(poles)
     for _ in range(2):
-        poles, starts = merged(poles, starts)
+        poles = merged(poles)
+        fits = fit_groups(ring, poles, joint_groups(poles, still), first_starts(poles, contact), Looks(ring, rest_of(ring, poles)), steps=6)
+        poles, _ = moved(poles, fits, loudest, still)
+    rest = rest_of(ring, poles)
+    table = profiles(ring, rest, poles)
+    settled = _nothing()
+    for sweep in range(SWEEPS):
         if not len(poles):
             return _nothing()
-        looks = Looks(ring, rest_of(ring, poles))
-        fits = fit_groups(ring, poles, joint_groups(poles, STEADY / len(ring.samples)), starts, looks, steps=6)
-        poles = moved(poles, fits, _sane)
-    for sweep in range(SWEEPS):
+        starts = choose_starts(ring, poles, table)
+        fits = fit_groups(ring, poles, joint_groups(poles, still), starts, Looks(ring, rest), steps=6)
+        before = poles
+        poles, keep = moved(poles, fits, loudest, still)
         rest = rest_of(ring, poles)
-        table = profiles(ring, rest)
-        if sweep >= SWEEPS - 3:
-            starts = choose_starts(ring, poles, table)
-        else:
-            starts = first_starts(poles, contact)
-        fits = fit_groups(ring, poles, joint_groups(poles, STEADY / len(ring.samples)), starts, Looks(ring, rest), steps=6)
-        poles = moved(poles, fits, _sane)
-        settled = collect(ring, poles, fits, table)
+        table = profiles(ring, rest, poles)
+        settled = collect(ring, before, poles, keep, fits, table)
         if sweep == SWEEPS - 1:
             break
-        swaps = resolve(poles, fits, 1.5) if sweep < SWEEPS - 2 else []
-        poles = swapped(poles, worthy(settled, ring), swaps)
-        poles, starts = merged(poles, first_starts(poles, contact))
-        if not len(poles):
-            return _nothing()
+        swaps = resolve(before, fits, 1.5) if sweep < SWEEPS - 2 else []
+        stays = keep.copy()
+        stays[keep] = worthy(settled, ring, local=True)
+        full = Poles(before.pole.copy(), before.amplitude.copy())
+        full.pole[keep], full.amplitude[keep] = poles.pole, poles.amplitude
+        better = merged(swapped(full, stays, swaps))
+        if swaps or len(better) < len(poles):
+            poles = better
+            rest = rest_of(ring, poles)
+            table = profiles(ring, rest, poles)
     return settled.take(worthy(settled, ring) & ~steady(settled.poles, ring))
 
 
@@ -100,7 +108,19 @@ def swapped(poles: Poles, keep: np.ndarray, swaps: list[tuple[np.ndarray, Poles]
     return poles.take(keep).plus(fresh)
 
 
-def merged(poles: Poles, starts: IntArray) -> tuple[Poles, IntArray]:
+def unshattered(poles: Poles) -> Poles:
+    """Without the splinters that a rough fit leaves beside a strong line: `resolve` finds the true ones again, with evidence."""
+    energy = np.abs(poles.amplitude) ** 2 / -poles.pole.real
+    kept: list[int] = []
+    for i in np.argsort(-energy):
+        s, strong = poles.pole[i], poles.pole[kept]
+        splinter = (np.abs(s.imag - strong.imag) < SPLINTER_WIDTHS * 2.0 * -strong.real) & (-s.real < 8.0 * -strong.real)
+        if not np.any(splinter):
+            kept.append(int(i))
+    return poles.take(np.sort(np.array(kept, dtype=int)))
+
+
+def merged(poles: Poles) -> Poles:
     """Without the same mode twice: the stronger of two poles within `SAME_WIDTHS` stays."""
     order = np.argsort(-np.abs(poles.amplitude) ** 2 / -poles.pole.real)
     kept: list[int] = []
@@ -112,8 +132,7 @@ def merged(poles: Poles, starts: IntArray) -> tuple[Poles, IntArray]:
         width = 2.0 * np.minimum(-s.real, -other.real)
         if not np.any((np.abs(s.imag - other.imag) < SAME_WIDTHS * width) & (np.abs(np.log(s.real / other.real)) < 0.5)):
             kept.append(int(i))
-    index = np.sort(np.array(kept, dtype=int))
-    return poles.take(index), starts[index]
+    return poles.take(np.sort(np.array(kept, dtype=int)))
 
 
 def first_starts(poles: Poles, contact: int) -> IntArray:
@@ -133,14 +152,11 @@ def choose_starts(ring: Ring, poles: Poles, table: Profiles) -> IntArray:
     return np.minimum(out, max(len(ring.samples) - 64, 0))
 
 
-def _sane(g: GroupFit) -> np.ndarray:
-    """Rows whose poles decay and whose amplitudes stay within reason."""
-    return np.asarray((g.fit.pole.real < 0).all(axis=1) & (np.abs(g.fit.amplitude) < 1e3).all(axis=1))
-
-
-def collect(ring: Ring, poles: Poles, fits: list[GroupFit], table: Profiles) -> Settled:
-    """Covariances of all modes: Fisher's, and the one that hears where in time the residual stands."""
-    m = len(poles)
+def collect(ring: Ring, before: Poles, after: Poles, keep: np.ndarray, fits: list[GroupFit], table: Profiles) -> Settled:
+    """Covariances of the modes kept: Fisher's, and the one that hears where in time the residual stands."""
+    m = len(before)
+    poles = Poles(before.pole.copy(), before.amplitude.copy())
+    poles.pole[keep], poles.amplitude[keep] = after.pole, after.amplitude
     covariance, fisher = np.full((m, 2, 2), np.inf), np.full((m, 2, 2), np.inf)
     start, length, group = np.zeros(m, int), np.zeros(m, int), np.zeros(m, int)
     excess = np.full(m, np.inf)
@@ -164,7 +180,7 @@ def collect(ring: Ring, poles: Poles, fits: list[GroupFit], table: Profiles) -> 
                 covariance[i] = block * raise_by[2 * j : 2 * j + 2, None] * raise_by[None, 2 * j : 2 * j + 2]
                 start[i], length[i], excess[i], group[i] = g.batch.start[r], n, ratio, number
             number += 1
-    return Settled(poles, covariance, fisher, start, length, excess, group)
+    return Settled(poles, covariance, fisher, start, length, excess, group).take(keep)
 
 
 def _local_level(ring: Ring, g: GroupFit, r: int, ratio: float, hz: float) -> float:
@@ -176,14 +192,16 @@ def _local_level(ring: Ring, g: GroupFit, r: int, ratio: float, hz: float) -> fl
     return (behind + here * ratio) / (behind + here)
 
 
-def worthy(s: Settled, ring: Ring) -> np.ndarray:
+def worthy(s: Settled, ring: Ring, *, local: bool = False) -> np.ndarray:
     """Modes whose energy stands out of the residual around them: (a/u(a))^2 = rho^2/4 for a lone line (Fisher).
 
-    A steady tone has no decay to be sure of; it stays while its amplitude stands out, to shield its neighbours.
+    A steady tone has no decay to be sure of; it stays while its amplitude stands out, to shield its neighbours. `local` asks the
+    level of the mode's own bins only: while the others are still settling, their misfit must not speak against it.
     """
     a = -s.poles.pole.real
     with np.errstate(all="ignore"):
-        rho2 = 4 * a**2 / s.covariance[:, 0, 0]
+        variance = s.fisher[:, 0, 0] * np.clip(s.excess, 1.0, 30.0) if local else s.covariance[:, 0, 0]
+        rho2 = 4 * a**2 / variance
     hz = s.poles.pole.imag * ring.rate / (2 * np.pi)
     inside = (hz > ring.low_hz) & (hz < ring.high_hz)
     level = ring.noise.at(hz) * ring.rate / 2 * np.maximum(s.excess, 1.0)
