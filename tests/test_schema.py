@@ -10,6 +10,7 @@ from dataclasses import replace
 from pathlib import Path
 from typing import Any
 
+import numpy as np
 import pytest
 from jsonschema import Draft202012Validator
 
@@ -118,6 +119,17 @@ def test_digital_silence_is_null() -> None:
     assert result["recordings"][0]["strikes"][0]["noise_dbfs"] is None
 
 
+def test_scalars_of_numpy_are_numbers() -> None:
+    """What an estimator leaves as np.float32, np.int64 or np.bool_ is written as the number that it is."""
+    of_a_strike: dict[str, Any] = {"onset_s": np.float32(0.25), "accepted": np.bool_(True)}
+    of_the_whole: dict[str, Any] = {"channels": np.int64(2), "sample_rate_hz": np.float32(44100)}
+    bar = replace(fakes.bar(), strikes=(replace(fakes.bar().strikes[0], **of_a_strike),), **of_the_whole)
+    result = json.loads(document.as_json(document.document("0.1.0", [bar])))
+    VALIDATOR.validate(result)
+    assert result["recordings"][0]["channels"] == 2
+    assert result["recordings"][0]["strikes"][0]["onset_s"] == 0.25
+
+
 def test_nan_is_refused_rather_than_printed() -> None:
     """A NaN that slipped in is an error, not a document that strict parsers refuse."""
     broken: Measurement = replace(fakes.bar(), duration_s=math.nan)
@@ -154,7 +166,9 @@ def word_with_blanks(result: dict[str, Any]) -> None:
 
 
 @pytest.mark.parametrize(
-    "spoil", [drop_doubts, add_a_name, drop_u95, budget_in_a_strike, negative_u95, another_version, word_with_blanks], ids=lambda f: str(f.__name__)
+    "spoil",
+    [drop_doubts, add_a_name, drop_u95, budget_in_a_strike, negative_u95, another_version, word_with_blanks],
+    ids=lambda f: str(f.__name__),
 )
 def test_spoiled_documents_are_refused(spoil: Callable[[dict[str, Any]], None]) -> None:
     """The schema is strict: each of these is refused, and the same document unspoiled is not."""
@@ -163,4 +177,3 @@ def test_spoiled_documents_are_refused(spoil: Callable[[dict[str, Any]], None]) 
     spoiled = copy.deepcopy(result)
     spoil(spoiled)
     assert not VALIDATOR.is_valid(spoiled)
-

@@ -74,17 +74,20 @@ def as_json(result: dict[str, Any]) -> str:
 
 def finite(value: float | None) -> float | None:
     """The value, or None where there is none to give: the level of digital silence is minus infinity."""
-    return value if value is not None and math.isfinite(value) else None
+    return float(value) if value is not None and math.isfinite(value) else None
+
+
+# float(), int() and bool() below turn NumPy's scalars, which estimators may leave in a result, into what JSON knows
 
 
 def _recording(measurement: Measurement) -> dict[str, Any]:
     return {
         "file": measurement.file,
         "sha256": measurement.sha256,
-        "sample_rate_hz": measurement.sample_rate_hz,
-        "channels": measurement.channels,
-        "channel": measurement.channel,
-        "duration_s": measurement.duration_s,
+        "sample_rate_hz": float(measurement.sample_rate_hz),
+        "channels": int(measurement.channels),
+        "channel": int(measurement.channel),
+        "duration_s": float(measurement.duration_s),
         "strikes": [_strike(strike) for strike in measurement.strikes],
         "modes": [_mode(mode, pooled=True) for mode in measurement.modes],
         "doubts": _doubts(measurement.doubts),
@@ -93,11 +96,11 @@ def _recording(measurement: Measurement) -> dict[str, Any]:
 
 def _strike(strike: Strike) -> dict[str, Any]:
     return {
-        "onset_s": strike.onset_s,
-        "usable_s": strike.usable_s,
+        "onset_s": float(strike.onset_s),
+        "usable_s": float(strike.usable_s),
         "peak_dbfs": finite(strike.peak_dbfs),
         "noise_dbfs": finite(strike.noise_dbfs),
-        "accepted": strike.accepted,
+        "accepted": bool(strike.accepted),
         "doubts": _doubts(strike.doubts),
         "modes": [_mode(mode, pooled=False) for mode in strike.modes],
     }
@@ -107,21 +110,22 @@ def _mode(mode: Mode, *, pooled: bool) -> dict[str, Any]:
     route = mode.half_power
     result: dict[str, Any] = {name: _figure(getattr(mode, name), pooled=pooled) for name in FIGURES}
     result |= {
-        "level_db": mode.level_db,
-        "level_dbfs": mode.level_dbfs,
+        "level_db": float(mode.level_db),
+        "level_dbfs": float(mode.level_dbfs),
         "snr_db": finite(mode.snr_db),
-        "decay_range_db": mode.decay_range_db,
-        "strikes": mode.strikes,
-        "half_power": None if route is None else {"q": _figure(route.q, pooled=False), "agrees": route.agrees},
+        "decay_range_db": float(mode.decay_range_db),
+        "strikes": int(mode.strikes),
+        "half_power": None if route is None else {"q": _figure(route.q, pooled=False), "agrees": bool(route.agrees)},
         "doubts": _doubts(mode.doubts),
     }
     return result
 
 
 def _figure(figure: Figure, *, pooled: bool) -> dict[str, Any]:
-    result: dict[str, Any] = {"value": figure.value, "u95": finite(figure.u95)}
+    result: dict[str, Any] = {"value": float(figure.value), "u95": finite(figure.u95)}
     if pooled:
-        result |= {"k": finite(figure.k), "nu": finite(figure.nu), "parts": None if figure.parts is None else asdict(figure.parts)}
+        parts = None if figure.parts is None else {name: float(part) for name, part in asdict(figure.parts).items()}
+        result |= {"k": finite(figure.k), "nu": finite(figure.nu), "parts": parts}
     return result
 
 

@@ -30,7 +30,7 @@ def render_pooled(pooled: Pooled, *, view: Look | None = None, a4_hz: float | No
 
 def _page(above: str, modes: Sequence[Mode], doubts: Sequence[Said], view: Look, a4_hz: float | None) -> str:
     lines = [view.say(above)]
-    lines += _table(modes, view, a4_hz) if modes else ["no mode found"]
+    lines += _table(modes, view, a4_hz) if modes else []
     lines += [view.say(beat) for beat in words.beats(modes, all_of_them=True)]
     for doubt in doubts:
         about = f"{doubt.about}: " if doubt.about else ""

@@ -13,6 +13,7 @@ from qmeter.show.document import Pooled
 from qmeter.show.look import Look
 from qmeter.show.words import Said
 
+NOTHING = "no mode found"
 _READABLE = 100
 """sentences run no wider than this"""
 
@@ -21,6 +22,8 @@ def render_measurement(measurement: Measurement, width: int, *, view: Look | Non
     """One recording, at most `width` cells wide; `a4_hz` adds notes."""
     view = view or Look()
     above = [*_sentence(words.title(measurement), width, view, look.FIGURE), *_sentence(words.strikes(measurement), width, view)]
+    if measurement.strikes and not measurement.modes:
+        above += _sentence(NOTHING, width, view)
     return _page(above, measurement.modes, words.doubts(measurement, brief=True), width, view, a4_hz)
 
 
@@ -35,8 +38,6 @@ def _page(above: list[Text], modes: Sequence[Mode], doubts: Sequence[Said], widt
     lines = list(above)
     if modes:
         lines += [Text(""), *table(modes, width, view=view, a4_hz=a4_hz), Text("")]
-    else:
-        lines += _sentence("no mode found", width, view)
     for beat in words.beats(modes, all_of_them=a4_hz is not None):
         lines += _hanging("~", look.LINE, "", beat, width, view)
     lines += sentences(doubts, width, view)
