@@ -244,7 +244,7 @@ def _check_values(samples: npt.NDArray[np.floating[Any]], rate: float, name: str
     if bad:
         frame, channel = divmod(first, samples.shape[1])
         held = "1 sample that is" if bad == 1 else f"{bad} samples that are"
-        where = f"at {frame / rate:.6g} s (frame {frame}, channel {channel + 1})"
+        where = f"at {frame / rate:.4f} s (frame {frame}, channel {channel + 1})"
         raise RecordingError(
             f"{name} holds {held} NaN or Inf, the first {where}. Export it again, or leave that part out with --from and --to.",
             code="not-finite",

@@ -430,7 +430,7 @@ def float_wav(*values: float) -> bytes:
         (
             float_wav(0.0, float("nan"), float("inf")),
             "not-finite",
-            r"2 samples that are NaN or Inf, the first at 2.08333e-05 s \(frame 1, channel 1\)",
+            r"2 samples that are NaN or Inf, the first at 0\.0000 s \(frame 1, channel 1\)",
         ),
         (float_wav(0.0, 3e38), "too-large", "a sample of 3e[+]38 times full scale"),
         (b"fLaC" + bytes(50), "unreadable", "begins like a FLAC file"),
