@@ -5,7 +5,7 @@ Every element of the matrix is a sum over n of n^k q^n, k = 0, 1, 2, with q a pr
 length (the sums over 2N follow from those over N), which is exact and, unlike the closed form of the series, does not cancel at q near 1.
 
 Coloured noise: each mode is whitened by the density at its own frequency; a pair's element by the geometric mean of the two.
-That is right to second order in the mode's width over the scale on which the density changes (checked in tests/test_synth.py).
+In 1/f noise that is within 3.5 % of whitening bin by bin at Q 35 and within 1 % at Q 140 (checked in tests/test_synth.py).
 """
 
 from __future__ import annotations

@@ -1,11 +1,11 @@
-"""Modes driven by a contact force, computed by time stepping. Imports nothing from qmeter: it is a second opinion on what a struck object does.
+"""Modes driven by a contact force, computed by time stepping. Imports nothing from qmeter: a second opinion on what a struck object does.
 
 A mode obeys x'' + 2 a x' + (w^2 + a^2) x = gain * force(t), w its damped frequency. Its velocity is Re(s) with the one-pole state
 
     s' = (-a + i w) s + gain * (1 + i a / w) * force(t),      v = Re(s)
 
-(check: the impulse response of v is exp(-a t) (cos w t - (a/w) sin w t)). While the force acts, s is stepped at an oversampled rate with the
-force taken as straight between its samples (first-order hold, exact for that); afterwards s is stepped from sample to sample by its pole.
+(check: the impulse response of v is exp(-a t) (cos w t - (a/w) sin w t)). While the force acts, s is stepped at an oversampled rate with
+the force taken as straight between its samples (first-order hold, exact for that); afterwards it is stepped from sample to sample.
 Frequency and Q are true by construction.
 """
 

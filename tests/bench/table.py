@@ -21,6 +21,15 @@ class Limit:
         """A figure that could not be formed (NaN) does not hold."""
         return self.low <= value <= self.high
 
+    def may_be_chance(self, percent: float, of: float) -> bool:
+        """Whether a share (in per cent, of so many) lies within its own 95 % sampling error of the limit (Wilson's interval)."""
+        if not (of > 0 and math.isfinite(percent)):
+            return False
+        p, z2 = percent / 100.0, 1.96**2
+        centre = (p + z2 / (2 * of)) / (1 + z2 / of)
+        half = math.sqrt(z2 * (p * (1 - p) / of + z2 / (4 * of * of))) / (1 + z2 / of)
+        return 100 * (centre + half) >= self.low and 100 * (centre - half) <= self.high
+
     def words(self) -> str:
         """As printed beside the figure."""
         bounds = []
@@ -33,6 +42,18 @@ class Limit:
 
 
 U_MEDIAN, U_LEAST = Limit(high=1.2), Limit(low=0.85)
+
+
+SAMPLE_OF = {
+    "found %": "modes",
+    "all found %": "cases",
+    "split %": "cases",
+    "covers Q %": "modes found",
+    "covers f %": "modes found",
+    "doubt there %": "cases",
+    "bounces marked %": "bounces",
+}
+"""Shares, and the figure that says of how many: a small run is told from a missed floor by the sampling error of the share."""
 
 
 def _covers(low: float, high: float) -> dict[str, Limit]:
@@ -126,6 +147,7 @@ def summarise(family: str, records: list[dict[str, Any]]) -> dict[str, float]:
     if family.startswith("pairs"):
         figures["all found %"] = _share([all(m["found"] for m in r["modes"]) for r in records])
     figures["invented"] = sum(len(r["invented"]) for r in records) / max(len(records), 1)
+    figures["modes found"] = len(found)
     if found:
         q_error = _column(found, "q_error")
         figures |= _normalised(found) | _coverage(found)
@@ -146,6 +168,8 @@ def _special(family: str, records: list[dict[str, Any]], found: list[dict[str, A
     if asked:
         name = "bounces marked %" if family == "struck" else "doubt there %"
         figures[name] = _share([r["doubt_there"] for r in asked])
+        if family == "struck":
+            figures["bounces"] = len(asked)
     if family == "struck":
         figures["false double-strike %"] = _share(["double-strike" in r["codes"] for r in records if "doubt_there" not in r])
     if family == "hum":
@@ -197,6 +221,9 @@ def print_row(name: str, per_seed: dict[int, dict[str, float]]) -> int:
         mark = ""
         if limit is not None and not all(limit.holds(v) for v in values):
             mark, missed = "   <-- missed", missed + 1
+            sizes = [per_seed[s].get(SAMPLE_OF.get(key, "modes"), 0) for s in seeds]
+            if key.endswith("%") and key in SAMPLE_OF and all(limit.may_be_chance(v, n) for v, n in zip(values, sizes, strict=True)):
+                mark = "   <-- missed, but within chance at this count"
         print(f"  {key:<28}" + "".join(f"{number(v):>10}" for v in values) + (f"   {limit.words()}" if limit else "") + mark)
     for key in limits.keys() - set(keys):
         print(f"  {key:<28}{'no figure':>10}   {limits[key].words()}   <-- missed")
