@@ -105,6 +105,7 @@ def test_help_begins_with_examples(flag: str, capsys: pytest.CaptureFixture[str]
     """The examples stand before the options."""
     assert main(["replay", flag]) == 0
     out = capsys.readouterr().out
+    assert out.startswith("Usage: qmeter replay [OPTIONS] FILE...\n")
     assert 0 < out.index("Examples:") < out.index("Exit status") < out.index("--json")
     assert max(map(len, out.splitlines())) <= 80
 

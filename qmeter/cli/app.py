@@ -10,7 +10,7 @@ from typing import Annotated
 import typer
 
 from qmeter import __version__
-from qmeter.cli.replay import replay
+from qmeter.cli.replay import ReplayCommand, replay
 from qmeter.cli.say import bug, say, say_where
 from qmeter.errors import QmeterError
 
@@ -44,7 +44,7 @@ def start(context: typer.Context, version: Annotated[bool, typer.Option("--versi
         print(context.get_help())
 
 
-app.command("replay", short_help="measure saved recordings")(replay)
+app.command("replay", cls=ReplayCommand, short_help="measure saved recordings")(replay)
 
 
 def main(arguments: Sequence[str] | None = None) -> int:

@@ -4,9 +4,10 @@ from __future__ import annotations
 
 import sys
 from pathlib import Path
-from typing import TYPE_CHECKING, Annotated
+from typing import TYPE_CHECKING, Annotated, Any
 
 import typer
+from typer.core import TyperCommand
 
 from qmeter.cli import mountings
 from qmeter.cli.request import Request, check
@@ -33,6 +34,9 @@ Examples:
       --mounting 'hung=hung-*' --mounting 'foam=foam-*'
                                              one object, held in two ways
 
+FILE is a sound file (WAV, FLAC, AIFF, CAF, OGG, MP3, M4A); - is standard
+input.
+
 Each mode is one row: frequency, Q, T60, and the cycles in which its
 amplitude falls by e^-pi, each with its uncertainty at 95 %. The strip at the
 right is its decay: above, the level falling, bright where it was used; below,
@@ -46,8 +50,15 @@ Exit status: 0 something rang, 2 an option cannot be meant, 3 nothing rang,
 """
 
 
+class ReplayCommand(TyperCommand):
+    """Writes the usage line without the braces that Typer puts round a repeated argument."""
+
+    def collect_usage_pieces(self, ctx: Any) -> list[str]:
+        return ["[OPTIONS]", "FILE..."]
+
+
 def replay(
-    files: Annotated[list[str], typer.Argument(metavar="FILE", help="sound files; - is standard input", show_default=False)],
+    files: Annotated[list[str], typer.Argument(metavar="FILE", hidden=True)],
     json: Annotated[bool, typer.Option("--json", help="print the result document")] = False,
     csv: Annotated[bool, typer.Option("--csv", help="print a spreadsheet, one row a mode")] = False,
     plain: Annotated[bool, typer.Option("--plain", help="print lines without drawing, as into a pipe")] = False,
