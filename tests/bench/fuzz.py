@@ -1,6 +1,7 @@
 """Damage small sound files in thousands of ways and read them: only a Recording or a RecordingError may come of it.
 
     python -m tests.bench.fuzz --count 5000 --seed 1
+    python -m tests.bench.fuzz --count 500 --measure     those that can be read are measured too
 
 Each mutation follows from the seed and its number, so that a failure can be had again (`--only NUMBER`, which also keeps the file).
 They are read in a child process with a limit on its memory and an alarm on its time; when the child dies, the mutation that killed it is
@@ -20,6 +21,7 @@ import subprocess
 import sys
 import tempfile
 import time
+import warnings
 from collections import Counter
 from collections.abc import Iterator
 from dataclasses import dataclass
@@ -159,13 +161,19 @@ def mutation(seed: int, number: int, files: list[tuple[str, bytes]]) -> tuple[st
     return kind, mutate(rng, content, files)
 
 
-def read_one(path: Path) -> str:
-    """Load the file and say what came of it."""
-    from qmeter.errors import RecordingError
+def read_one(path: Path, *, measured: bool = False) -> str:
+    """Load the file, measure it too if asked, and say what came of it."""
+    from qmeter.errors import NothingRangError, RecordingError
     from qmeter.sound.files import Recording
 
     try:
         recording = Recording.load(path)
+        if measured:
+            from qmeter.estimate.measure import measure
+
+            with contextlib.suppress(NothingRangError), warnings.catch_warnings():
+                warnings.simplefilter("error")  # a division by zero, or an overflow, that numpy would only mention
+                measure(recording)
     except RecordingError as error:
         return f"refused: {error.code}"
     except BaseException as error:  # noqa: BLE001 - any other is what is looked for
@@ -176,14 +184,14 @@ def read_one(path: Path) -> str:
     return f"doubted: {', '.join(codes)}" if codes else "recording"
 
 
-def child(seed: int, first: int, count: int) -> None:
+def child(seed: int, first: int, count: int, measured: int = 0) -> None:
     """Read mutations `first` to `first + count`, one line of JSON before and after each."""
     files = sound_files()
     with tempfile.TemporaryDirectory() as folder:
         path = Path(folder) / "damaged"
         for kind, content in files:  # load every library, and be sure that the undamaged are read
             path.write_bytes(content)
-            if "refused" in (says := read_one(path)):
+            if "refused" in (says := read_one(path, measured=bool(measured))):
                 raise SystemExit(f"{kind} is not read undamaged: {says}")
         held = int(Path("/proc/self/statm").read_text().split()[0]) * resource.getpagesize()
         resource.setrlimit(resource.RLIMIT_AS, (held + HEADROOM_BYTES, held + HEADROOM_BYTES))
@@ -194,21 +202,21 @@ def child(seed: int, first: int, count: int) -> None:
             print(json.dumps({"number": number, "kind": kind}), flush=True)
             signal.alarm(ITEM_SECONDS)  # not handled: the kernel ends the child, also inside a C loop
             start = time.perf_counter()
-            says = read_one(path)
+            says = read_one(path, measured=bool(measured))
             signal.alarm(0)
             print(json.dumps({"number": number, "kind": kind, "says": says, "seconds": time.perf_counter() - start}), flush=True)
         print(json.dumps({"resident_kb": resource.getrusage(resource.RUSAGE_SELF).ru_maxrss}), flush=True)
 
 
-def run(seed: int, count: int, first: int = 0, resident_kb: list[int] | None = None) -> Iterator[Outcome]:
-    """Outcomes of mutations `first` to `first + count`; children are started anew after each death.
+def run(seed: int, count: int, *, measured: bool = False, resident_kb: list[int] | None = None) -> Iterator[Outcome]:
+    """Outcomes of the first `count` mutations; children are started anew after each death.
 
     `resident_kb` receives the peak of the resident memory at the start and at the end of each child that lived.
     """
     environment = {**os.environ, "PYTHONPATH": str(ROOT), "OPENBLAS_NUM_THREADS": "1", "OMP_NUM_THREADS": "1"}
-    place, stop = first, first + count
+    place, stop = 0, count
     while place < stop:
-        command = [*CHILD, f"{seed},{place},{stop - place}"]
+        command = [*CHILD, f"{seed},{place},{stop - place},{int(measured)}"]
         with subprocess.Popen(command, stdout=subprocess.PIPE, stderr=subprocess.PIPE, text=True, env=environment, cwd=ROOT) as process:
             assert process.stdout is not None and process.stderr is not None
             begun: dict[str, object] | None = None
@@ -254,6 +262,7 @@ def main() -> int:
     parser.add_argument("--count", type=int, default=5000)
     parser.add_argument("--seed", type=int, nargs="+", default=[1])
     parser.add_argument("--only", type=int, help="make this mutation alone, keep its file and read it in this process")
+    parser.add_argument("--measure", action="store_true", help="measure what can be read")
     parser.add_argument("family", nargs="*", help=argparse.SUPPRESS)  # `python -m tests.bench fuzz` leaves its own word here
     parser.add_argument("--child", help=argparse.SUPPRESS)
     options = parser.parse_args()
@@ -265,15 +274,15 @@ def main() -> int:
         kind, content = mutation(seed, options.only, sound_files())
         path = Path(tempfile.gettempdir()) / f"qmeter-fuzz-{seed}-{options.only}"
         path.write_bytes(content)
-        print(f"{path} ({kind}): {read_one(path)}")
+        print(f"{path} ({kind}): {read_one(path, measured=options.measure)}")
         return 0
-    return sum(report(each, options.count) for each in options.seed) and 1
+    return sum(report(each, options.count, measured=options.measure) for each in options.seed) and 1
 
 
-def report(seed: int, count: int) -> int:
+def report(seed: int, count: int, *, measured: bool) -> int:
     """Run one seed and print what came of it; the number of outcomes that are not allowed."""
     start, resident_kb = time.monotonic(), list[int]()
-    outcomes = list(run(seed, count, resident_kb=resident_kb))
+    outcomes = list(run(seed, count, measured=measured, resident_kb=resident_kb))
     print(table(outcomes))
     slowest = max(outcomes, key=lambda outcome: outcome.seconds)
     print(f"\nseed {seed}: {len(outcomes)} mutations in {time.monotonic() - start:.0f} s; slowest {slowest.seconds:.2f} s", end="")
