@@ -19,7 +19,10 @@ SHORTEST_CONTACT_S, LONGEST_CONTACT_S = 0.0002, 0.0026
 TRAINING_S = 0.15
 LONG_ORDER, SHORT_ORDER = 320, 96
 """7 ms at 48 kHz: forty modes and the noise between them; and 2 ms"""
-LONGEST_KNOCK_S = 0.015
+UNSTEADY = 3.0
+"""a residual that still decays (a knock's tail) also scatters more: the threshold grows with it up to this factor"""
+LEAST_SHARE = 10**-2.9
+"""power of a second contact's residual over the first's: a tenth of the force, and a longer contact"""
 LATEST_SECOND_S = 0.075
 SECOND_WINDOWS_S = (0.0003, 0.001, 0.002, 0.005)
 FEWEST = 12
@@ -127,23 +130,35 @@ def second_contact(x: FloatArray, rate: float, onset: int, end: int) -> tuple[in
         return None, shortest
     residual, floor = _backward_residual(ring, skip, order)
     contact_end = min(max(onset + _first_contact(residual, ring_rate, skip, floor) * factor, shortest), x.size)
-    second = _latest_force(residual, ring_rate, skip, floor)
-    if second is not None and second < LONGEST_KNOCK_S * ring_rate:
-        looks = ((LONG_ORDER, 0.012), (SHORT_ORDER, 0.008))
-        for longest, from_s in looks:
-            later = int(from_s * ring_rate)
-            order = min(longest, (ring.size - later) // 10)
-            confirmed = None if order < 12 else _latest_force(*_with_rate(ring, later, order, ring_rate, skip))
-            if confirmed is not None:
-                break
-        else:
-            second = None
+    second = None
+    if _latest_force(residual, ring_rate, skip, floor) is not None:
+        second = _confirmed(ring, ring_rate, skip)
     return (None if second is None else onset + second * factor), contact_end
 
 
-def _with_rate(ring: FloatArray, later: int, order: int, rate: float, skip: int) -> tuple[FloatArray, float, int, float]:
-    residual, floor = _backward_residual(ring, later, order)
-    return residual, rate, skip, floor
+def _confirmed(ring: FloatArray, rate: float, skip: int) -> int | None:
+    """The second look: index of the second contact, or None. See `second_contact`."""
+    for longest, from_s in ((LONG_ORDER, 0.012), (SHORT_ORDER, 0.008)):
+        later = int(from_s * rate)
+        order = min(longest, (ring.size - later) // 10)
+        if order < 12:
+            continue
+        residual, floor = _backward_residual(ring, later, order)
+        second = _latest_force(residual, rate, skip, floor)
+        if second is not None and _share(residual, rate, skip, second) > LEAST_SHARE:
+            return second
+    return None
+
+
+def _share(residual: FloatArray, rate: float, skip: int, second: int) -> float:
+    """Power of the second contact over that of the first, both above the median."""
+    width = max(int(0.0006 * rate), 4)
+    sums = np.concatenate([[0.0], np.cumsum(residual**2)])
+    power = (sums[width:] - sums[:-width]) / width
+    typical = float(np.median(power[skip : int(LATEST_SECOND_S * rate)]))
+    around = power[max(second - width, skip) : second + int(0.003 * rate)]
+    first = float(power[:skip].max()) - typical
+    return (float(around.max(initial=0.0)) - typical) / first if first > 0.0 else 1.0
 
 
 def _backward_residual(ring: FloatArray, train_from: int, order: int) -> tuple[FloatArray, float]:
@@ -188,8 +203,10 @@ def _latest_force(residual: FloatArray, rate: float, skip: int, floor: float) ->
             continue
         power = (sums[n + width] - sums[n]) / width
         following = (sums[n + width + after] - sums[n + width]) / after
-        level = np.maximum(np.maximum(before[n - short - start], following), float(np.median(power)))
-        ratio = power / ((level + floor + np.finfo(float).tiny) * threshold)
+        typical = float(np.median(power)) + floor + np.finfo(float).tiny
+        earlier = before[n - short - start]
+        unsteady = np.clip(earlier / typical, 1.0, UNSTEADY)
+        ratio = power / (np.maximum(np.maximum(earlier, following) + floor, typical) * unsteady * threshold)
         top = int(np.argmax(ratio))
         if ratio[top] > best:
             best, found = float(ratio[top]), int(n[top])

@@ -29,6 +29,10 @@ SAME_STRIKE_S = 0.07
 """a second event within this time belongs to the same strike, unless it is far stronger"""
 STRONGER = 3.0
 """peak ratio beyond which it is a strike of its own: a bounce is never stronger than the contact before it"""
+NEIGHBOUR = 0.35
+"""a rise in one band alone is noise or rumble: a second band must come this near to its threshold"""
+LEAST_ADDED = 2.5e-5
+"""energy of an event over that of the ring it falls in (-46 dB): what adds less does not end the ring"""
 FLOOR_DB = -96.0
 """band energies are floored at white noise this far below the recording's peak: 16 bit rounding is no event"""
 
@@ -164,11 +168,19 @@ def _events(frames: _Frames) -> list[int]:
     sums = np.cumsum(np.log(extended), axis=0)
     past = np.exp((sums[PAST_FRAMES : PAST_FRAMES + count] - sums[:count]) / PAST_FRAMES)  # frames t-41 .. t-2
     threshold = 1.0 + 20.0 * bins**-0.6
-    rises = np.any(energy > threshold * np.maximum(prior, 1.5 * past), axis=1)
+    ratio = energy / (threshold * np.maximum(prior, 1.5 * past))
+    rises = np.any(ratio > 1.0, axis=1) & (np.count_nonzero(ratio > NEIGHBOUR, axis=1) >= 2)
     hot = np.flatnonzero(rises)
     if hot.size == 0:
         return []
-    return [int(t) for t in hot[np.diff(hot, prepend=-100) > 3]]
+    starts = hot[np.diff(hot, prepend=-100) > 3]
+    return [int(t) for t in starts if _matters(energy[t : t + 3], prior[t])]
+
+
+def _matters(energy: FloatArray, prior: FloatArray) -> bool:
+    """Whether what a rise adds is more than a tick far below the ring it falls in."""
+    added = np.maximum(energy.max(axis=0) - prior, 0.0).sum()
+    return bool(added > LEAST_ADDED * prior.sum())
 
 
 def _falls(frames: _Frames) -> bool:
@@ -182,7 +194,9 @@ def _falls(frames: _Frames) -> bool:
 
 def _spans(x: FloatArray, rate: float, frames: _Frames, events: list[int]) -> tuple[StrikeSpan, ...]:
     """Turn events into spans: onsets to the sample, bundling what follows within SAME_STRIKE_S."""
-    onsets, seconds, peaks = [], [], []
+    onsets: list[int] = []
+    seconds: list[int | None] = []
+    peaks: list[float] = []
     near = max(int(0.01 * rate), 4)
     for frame in events:
         onset = contact.refine_onset(x, rate, frame * frames.hop, frames.hop, onsets[-1] if onsets else None)
@@ -213,8 +227,11 @@ def _span(
     if last - first >= 8:
         noise = np.maximum(noise, frames.energy[first:last].mean(axis=0))
     met = _meets_noise(frames, noise, onset, end)
+    if quiet_to == quiet_from:  # the noise was taken from the tail, which may still ring
+        met = met and not (_still_falls(frames, onset, end, 4) and _still_falls(frames, onset, end, 8))
+    clipped = contact.is_clipped(x[onset : min(end, onset + int(rate))])
     found, contact_end = contact.second_contact(x, rate, onset, end)
-    if second is None or (found is not None and found < second):
+    if found is not None and not clipped and (second is None or found < second):  # a clipped ring is not predictable
         second = found
     peak = float(np.abs(x[onset:end]).max(initial=0.0))
     return StrikeSpan(
@@ -224,7 +241,7 @@ def _span(
         quiet_to=quiet_to,
         end=end,
         peak=peak,
-        clipped=contact.is_clipped(x[onset : min(end, onset + int(rate))]),
+        clipped=clipped,
         second_contact=second,
         cut_by_next=followed and not met,
         cut_by_end=not followed and not met,
@@ -267,3 +284,20 @@ def _meets_noise(frames: _Frames, noise: FloatArray, onset: int, end: int) -> bo
     first = max(last - 8, min(onset // frames.hop + 1, last - 1))
     level = frames.energy[first:last].mean(axis=0)
     return bool(np.all(level < noise * (1.0 + 5.0 / np.sqrt(frames.bins))))
+
+
+def _still_falls(frames: _Frames, onset: int, end: int, part: int) -> bool:
+    """Whether any band's log energy falls over the last 1/part of the span: by 0.3 (1.3 dB), at five sigma of its own scatter."""
+    first, last = onset // frames.hop + 1, max(end // frames.hop - 1, 1)
+    start = last - max((last - first) // part, min(last - first, 10))
+    if last - start < 6:
+        return True
+    t = np.linspace(-0.5, 0.5, last - start)
+    logs = np.log(frames.energy[start:last])
+    spread = float(t @ t)
+    slope = t @ logs / spread
+    scatter = np.sum((logs - logs.mean(axis=0) - t[:, None] * slope) ** 2, axis=0) / (t.size - 2)
+    level = np.exp(logs.mean(axis=0)) / frames.bins
+    heard = level > 1e-7 * float(level.max())
+    error = np.sqrt(1.5 * scatter / spread)  # half-overlapping frames count for two thirds
+    return bool(np.any(heard & (-slope > np.maximum(0.3, 5.0 * error))))
