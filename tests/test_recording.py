@@ -105,7 +105,9 @@ def test_not_finite_says_how_many_and_where() -> None:
     samples[300_000, 1] = np.inf
     samples[599_999, 0] = np.nan
     samples[300_001, 0] = -np.inf
-    with pytest.raises(RecordingError, match=r"3 samples that are NaN or Inf, the first at 6\.2500 s \(frame 300000, channel 2\)") as caught:
+    with pytest.raises(
+        RecordingError, match=r"3 samples that are NaN or Inf, the first at 6\.2500 s \(frame 300000, channel 2\)"
+    ) as caught:
         Recording(samples, 48_000)
     assert caught.value.code == "not-finite" and caught.value.exit_status == 4
 
