@@ -6,6 +6,7 @@ import ast
 import json
 import math
 import runpy
+from collections.abc import Callable
 from pathlib import Path
 
 import numpy as np
@@ -75,11 +76,12 @@ def test_white_noise_has_its_density() -> None:
 
 def test_same_seed_same_samples() -> None:
     """Every random part draws from the Generator it is given, and from nothing else."""
-    for make in (
+    makers: list[Callable[[np.random.Generator], synth.Samples]] = [
         lambda rng: synth.white_noise(rng, 500, 1.0),
         lambda rng: synth.pink_noise(rng, RATE, 500, 1.0),
         lambda rng: synth.knock(rng, RATE, 500, 0.002, 1.0, 0.002),
-    ):
+    ]
+    for make in makers:
         first, again, other = (make(np.random.default_rng(seed)) for seed in (7, 7, 8))
         assert np.array_equal(first, again)
         assert not np.array_equal(first, other)

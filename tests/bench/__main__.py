@@ -16,6 +16,7 @@ import time  # noqa: E402
 from typing import Any  # noqa: E402
 
 from tests.bench import families, table  # noqa: E402
+from tests.bench.clutter import NoRecordingsError  # noqa: E402
 from tests.bench.judge import judge  # noqa: E402
 
 
@@ -103,7 +104,12 @@ def main() -> int:
     missed, kept = 0, {}
     for family in chosen_families(options.family):
         started = time.perf_counter()
-        records = run_family(family, options, pool)
+        try:
+            records = run_family(family, options, pool)
+        except NoRecordingsError as error:
+            print(f"\n{family}   NOT RUN: {error}   <-- missed")
+            missed += 1
+            continue
         missed += show_family(family, records, options)
         kept[family] = records
         print(f"  ({time.perf_counter() - started:.0f} s)", flush=True)

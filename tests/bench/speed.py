@@ -29,6 +29,9 @@ from tests.bench.case import Array, decibels, generator, log_uniform, phase
 from tests.bench.families import spaced
 
 RATE_HZ, SECONDS, MODES = 48000.0, 10.0, 20
+ENTRY = "from qmeter.cli.app import main; main()"
+"""What the installed command runs."""
+
 DENSE = ("perc_till", "drum_cymbal_open", "drum_splash_hard", "perc_bell")
 
 
@@ -126,7 +129,7 @@ def start_up() -> list[bool]:
     def run(*arguments: str) -> None:
         subprocess.run([sys.executable, *arguments], check=True, stdout=subprocess.DEVNULL)
 
-    ours = quickest(lambda: run("-m", "qmeter", "--help"), 7)
+    ours = quickest(lambda: run("-c", ENTRY, "--help"), 7)
     base = quickest(lambda: run("-c", "import typer, rich"), 7)
     return [verdict("qmeter --help over import typer, rich", ours / base, "", None, 2.5, "")]
 
@@ -146,7 +149,7 @@ def batch() -> list[bool]:
             files.append(str(path))
 
         def run(jobs: int, some: list[str]) -> None:
-            command = [sys.executable, "-m", "qmeter", "replay", "--json", "--jobs", str(jobs), *some]
+            command = [sys.executable, "-c", ENTRY, "replay", "--json", "--jobs", str(jobs), *some]
             subprocess.run(command, check=True, stdout=subprocess.DEVNULL, stderr=subprocess.DEVNULL)
 
         start_one, start_two = quickest(lambda: run(1, files[:1]), 2), quickest(lambda: run(2, files[:2]), 2)
