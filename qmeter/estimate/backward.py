@@ -14,7 +14,7 @@ from dataclasses import dataclass
 import numpy as np
 import numpy.typing as npt
 
-from qmeter.estimate.half_power import Ring
+from qmeter.estimate.half_power import ModeRing
 from qmeter.relations import DECIBELS_PER_NEPER, T60_TIMES_DECAY_RATE
 
 Array = npt.NDArray[np.float64]
@@ -27,7 +27,7 @@ _CLEAR_DB = 7.0
 _LEAST_DB = 6.0
 """a shorter line says nothing"""
 _PER_DB = 10.0 / math.log(10.0)
-_STRAIGHT_P = 0.005
+_STRAIGHT_P = 0.004
 """for the loss and for the frequency each, so that a straight decay is called bent at most once in a hundred times"""
 _PATIENCE = 20
 _STEPS = 6
@@ -62,7 +62,7 @@ class Slope:
     decay_rate_per_s: float
     u_decay_rate_per_s: float
     offset_hz: float
-    """from the band's centre, as in `Ring`"""
+    """from the band's centre, as in `ModeRing`"""
     u_offset_hz: float
 
 
@@ -198,7 +198,7 @@ def _sample_weights(slope_of: Array, at_cut: Array, energy: Array, tail: float, 
     return result
 
 
-def backward_integrals(rings: Sequence[Ring]) -> list[Backward]:
+def backward_integrals(rings: Sequence[ModeRing]) -> list[Backward]:
     """The third route for each ring (complex envelopes)."""
     return [backward_integral_route(np.abs(ring.samples) ** 2, ring.step_s, ring.noise_variance, ring.decay_rate_per_s) for ring in rings]
 
@@ -206,7 +206,7 @@ def backward_integrals(rings: Sequence[Ring]) -> list[Backward]:
 # ---- straight or not ----
 
 
-def bend(ring: Ring) -> Bend | None:
+def bend(ring: ModeRing) -> Bend | None:
     """Test the decay of one ring (complex envelope) against a straight one; None where fewer than ten samples or 6 dB stand out.
 
     The envelope over the fitted decay is regressed, weighted by that decay's power, on 1, t, t^2 and exp(-alpha t): the first two

@@ -36,7 +36,7 @@ _FALSE_ALARM_FACTOR = 3.0
 
 
 @dataclass(frozen=True, slots=True)
-class Ring:
+class ModeRing:
     """One mode's ring alone, from the start of the fit: a decimated complex envelope, or the real samples themselves (low Q)."""
 
     samples: Array | Complex
@@ -51,7 +51,7 @@ class Ring:
 
 def ring_from_bins(
     residual_bins: Complex, centre: int, bin_hz: float, amplitude: complex, offset_hz: float, decay_rate_per_s: float, noise_psd: float
-) -> Ring:
+) -> ModeRing:
     """The ring of one mode from what the fit left in the bins around it: the fitted decay, sampled, plus the residual's own envelope.
 
     So nothing but the residual is interpolated between bins, and the ring starts with the record, with no transient of the band. The
@@ -65,7 +65,7 @@ def ring_from_bins(
     residual = count * scipy.fft.ifft(np.roll(residual_bins, -centre))
     samples = amplitude * np.exp(pole * np.arange(count)) + residual
     # the analytic signal has twice the power: 2 S over the band's width
-    return Ring(samples, step, offset_hz, decay_rate_per_s, 2.0 * noise_psd * count * bin_hz)
+    return ModeRing(samples, step, offset_hz, decay_rate_per_s, 2.0 * noise_psd * count * bin_hz)
 
 
 @dataclass(frozen=True, slots=True)
@@ -89,12 +89,12 @@ class Width:
         return value, per_decay * self.u_decay_rate_per_s
 
 
-def half_power_route(ring: Ring, damped_frequency_hz: float) -> tuple[float, float]:
+def half_power_route(ring: ModeRing, damped_frequency_hz: float) -> tuple[float, float]:
     """(Q, its standard uncertainty) of one ring; NaN where the curve has no two half-power points."""
     return half_power_widths([ring])[0].q(damped_frequency_hz)
 
 
-def half_power_widths(rings: Sequence[Ring]) -> list[Width]:
+def half_power_widths(rings: Sequence[ModeRing]) -> list[Width]:
     """The half-power width of each ring, all at once; rings of like length cost least together.
 
     The uncertainty is that of white noise of the stated variance. It holds while the ring's peak stands well above the noise (u below
@@ -110,12 +110,12 @@ def half_power_widths(rings: Sequence[Ring]) -> list[Width]:
     return [width for width in results if width is not None]
 
 
-def _length(ring: Ring) -> int:
+def _length(ring: ModeRing) -> int:
     wanted = math.ceil(_LENGTH_IN_TIME_CONSTANTS / (ring.decay_rate_per_s * ring.step_s))
     return max(2, min(ring.samples.size, wanted))
 
 
-def _read(rings: Sequence[Ring]) -> list[Width]:
+def _read(rings: Sequence[ModeRing]) -> list[Width]:
     """Curves of one batch: peak and half-power points on a grid, then Newton's steps on the exact transform."""
     lengths = np.array([_length(ring) for ring in rings])
     samples = np.zeros((len(rings), int(lengths.max())), dtype=np.complex128)
@@ -138,7 +138,7 @@ def _read(rings: Sequence[Ring]) -> list[Width]:
     return [Width(*(float(row[place]) if seen[place] else math.nan for row in rows)) for place in range(len(rings))]
 
 
-def _without_image(ring: Ring, length: int) -> Complex:
+def _without_image(ring: ModeRing, length: int) -> Complex:
     """Samples less the ring's negative-frequency image, whose size and phase come from a linear fit of both at the fit's pole."""
     samples = ring.samples[:length]
     if np.iscomplexobj(samples):

@@ -1,0 +1,114 @@
+"""The other two routes held against the fit, mode by mode, and what is to be doubted where they differ or where the decay is bent."""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Sequence
+from dataclasses import replace
+
+from qmeter import relations
+from qmeter.estimate.backward import Backward, Bend, Slope, backward_integrals, bend
+from qmeter.estimate.half_power import ModeRing, agreement, half_power_widths
+from qmeter.estimate.modes import Doubt, Mode, SecondRoute
+from qmeter.uncertainty import NORMAL_95, Figure
+
+_LEAST_CHANGE = 0.03
+"""a change of the loss by less than this is not worth a sentence, however well it is seen"""
+_LEAST_GLIDE_WIDTHS = 0.05
+_WORTH_U = 0.25
+"""a route that knows Q no better than this, relative, is left out"""
+
+
+def cross_checked(modes: Sequence[Mode], rings: Sequence[ModeRing | None]) -> tuple[Mode, ...]:
+    """The same modes with their second and third route and the doubts that these raise.
+
+    `rings`: each mode's ring, complex envelope, other modes taken away (None: no check can be made of it). A route is None where it
+    cannot be read or is too uncertain to check anything.
+    """
+    known = [place for place, ring in enumerate(rings) if ring is not None]
+    present = [ring for ring in rings if ring is not None]
+    result = list(modes)
+    for place, ring, width, backward in zip(known, present, half_power_widths(present), backward_integrals(present), strict=True):
+        result[place] = _checked(modes[place], *width.q(modes[place].damped_frequency_hz), backward, bend(ring))
+    return tuple(result)
+
+
+def _checked(mode: Mode, q_width: float, u_width: float, backward: Backward, bent: Bend | None) -> Mode:
+    half_power = _route(mode, q_width, u_width)
+    integral = _route(mode, *backward.q(mode.damped_frequency_hz))
+    doubts = list(mode.doubts)
+    for route, name in ((half_power, "half-power width"), (integral, "backward-integrated decay")):
+        if route is not None and not route.agrees:
+            doubts.append(_disagrees(mode, route, name))
+    if bent is not None:
+        doubts += _bent(mode, bent)
+    return replace(mode, half_power=half_power, backward_integral=integral, doubts=tuple(doubts))
+
+
+def _q_part(mode: Mode, name: str) -> float:
+    """One part of the standard uncertainty of Q; 0 where the mode has none of that name."""
+    if name not in mode.budget:
+        return 0.0
+    f, a = mode.damped_frequency_hz, mode.amplitude_decay_rate_per_s
+    # Q = sqrt(omega^2 + a^2)/(2 a)
+    root = math.hypot(2.0 * math.pi * f, a)
+    return mode.budget[name].along(2.0 * math.pi**2 * f / (a * root), -2.0 * (math.pi * f / a) ** 2 / root)
+
+
+def _route(mode: Mode, q: float, u: float) -> SecondRoute | None:
+    """A route as a figure with its agreement; its u95 is that of the noise alone."""
+    if not (math.isfinite(q) and math.isfinite(u)) or u > _WORTH_U * q:
+        return None
+    fit = relations.q_from_damped(mode.damped_frequency_hz, mode.amplitude_decay_rate_per_s)
+    _, agrees = agreement(fit, _q_part(mode, "fit"), q, u, u_apart=_q_part(mode, "model"))
+    return SecondRoute(Figure(q, NORMAL_95 * u), agrees)
+
+
+def _disagrees(mode: Mode, route: SecondRoute, name: str) -> Doubt:
+    fit = mode.q
+    return Doubt(
+        "routes-disagree",
+        f"The {name} gives Q = {_plus_minus(route.q)}, the fit of the decay {_plus_minus(fit)}: further apart than the noise allows. "
+        "Something else rings in this band, or the loss changes as it decays: trust neither beyond their difference.",
+    )
+
+
+def _plus_minus(figure: Figure) -> str:
+    from qmeter.uncertainty import format_value_u95
+
+    return "{} ± {}".format(*format_value_u95(figure.value, figure.u95))
+
+
+def _bent(mode: Mode, bent: Bend) -> list[Doubt]:
+    """Sentences for a loss and for a frequency that change with the level, where they change by enough to matter."""
+    early, late = bent.early, bent.late
+    f = mode.damped_frequency_hz
+    doubts = []
+    change = abs(late.decay_rate_per_s / early.decay_rate_per_s - 1.0)
+    if bent.is_curved and min(early.decay_rate_per_s, late.decay_rate_per_s) > 0.0 and change > _LEAST_CHANGE:
+        q_early, q_late = (relations.q_from_damped(f, slope.decay_rate_per_s) for slope in (early, late))
+        doubts.append(
+            Doubt(
+                "curved-decay",
+                f"The decay is not straight: Q is {q_early:.3g} {_between(early)} and {q_late:.3g} {_between(late)}. The loss depends on "
+                "the amplitude, or two modes share the band; strike more softly to see which, and give Q with its range.",
+            )
+        )
+    glide = late.offset_hz - early.offset_hz
+    if bent.is_gliding and abs(glide) > _LEAST_GLIDE_WIDTHS * mode.amplitude_decay_rate_per_s / math.pi:
+        doubts.append(
+            Doubt(
+                "gliding",
+                f"The frequency {'falls' if glide < 0.0 else 'rises'} by {abs(glide):.2g} Hz ({100 * abs(glide) / f:.2g} %) from "
+                f"{_range(early)} to {_range(late)} below the strike: no one frequency is right. Strike more softly.",
+            )
+        )
+    return doubts
+
+
+def _between(slope: Slope) -> str:
+    return f"from {-slope.from_db + 0.0:.0f} to {-slope.to_db:.0f} dB"
+
+
+def _range(slope: Slope) -> str:
+    return f"{-slope.from_db + 0.0:.0f}-{-slope.to_db:.0f} dB"
