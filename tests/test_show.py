@@ -272,6 +272,8 @@ def strike(*codes: str, at: float = 1.0) -> Strike:
         ((strike(), strike()), "2 strikes, all kept"),
         ((strike("cut-off", at=0.5),), "one strike; strike 1 (at 0.50 s) set aside: cut off"),
         ((strike(), strike("double-strike", at=2.345)), "1 of 2 strikes kept; strike 2 (at 2.35 s) set aside: double strike"),
+        ((strike("no-ring"), strike("no-ring")), "none of 2 strikes kept; strikes 1 (at 1.00 s) and 2 (at 1.00 s) set aside: no ring"),
+        ((strike(), replace(strike(at=3.0), accepted=False)), "1 of 2 strikes kept; strike 2 (at 3.00 s) set aside: nothing rang"),
         (
             (strike(), strike("clipped", at=1), strike("clipped", at=2), strike("cut-off", at=3)),
             "1 of 4 strikes kept; strikes 2 (at 1.00 s) and 3 (at 2.00 s) set aside: clipped; strike 4 (at 3.00 s) set aside: cut off",

@@ -40,8 +40,8 @@ input.
 Each mode is one row: frequency, Q, T60, and the cycles in which its
 amplitude falls by e^-pi, each with its uncertainty at 95 %. The strip at the
 right is its decay: above, the level falling, bright where it was used; below,
-how far it strays from the fitted line. A straight stroke can be believed. A
-question mark says that there is a doubt, spelled out below the table.
+how far it strays from the fitted line. A straight stroke can be believed; it
+frays at its end, where the noise takes over. A question mark says that there is a doubt, spelled out below the table.
 
 \b
 Exit status: 0 something rang, 2 an option cannot be meant, 3 nothing rang,

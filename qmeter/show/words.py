@@ -55,14 +55,15 @@ def strikes(measurement: Measurement) -> str:
     kept = sum(strike.accepted for strike in hits)
     if not aside:
         return "one strike, kept" if kept == 1 else f"{kept} strikes, all kept"
-    parts = [f"{kept} of {len(hits)} strikes kept" if len(hits) > 1 else "one strike"]
+    parts = [f"{kept or 'none'} of {len(hits)} strikes kept" if len(hits) > 1 else "one strike"]
     parts += [f"{'strike' if len(names) == 1 else 'strikes'} {listed(names)} set aside: {reason}" for reason, names in aside.items()]
     return "; ".join(parts)
 
 
 def _reason(strike: Strike) -> str:
     """The codes of its doubts as words: "double-strike" is said "double strike"."""
-    return ", ".join(dict.fromkeys(doubt.code.replace("-", " ") for doubt in strike.doubts)) or "not like the others"
+    said = ", ".join(dict.fromkeys(doubt.code.replace("-", " ") for doubt in strike.doubts))
+    return said or ("not like the others" if strike.modes else "nothing rang")
 
 
 def doubts(measurement: Measurement, *, brief: bool = False) -> tuple[Said, ...]:
