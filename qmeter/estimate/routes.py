@@ -6,17 +6,61 @@ import math
 from collections.abc import Sequence
 from dataclasses import replace
 
+import numpy as np
+import numpy.typing as npt
+import scipy.fft
+
 from qmeter import relations
+from qmeter.dsp.band import bins_around
 from qmeter.estimate.backward import Backward, Bend, Slope, backward_integrals, bend
-from qmeter.estimate.half_power import ModeRing, agreement, half_power_widths
+from qmeter.estimate.half_power import ModeRing, agreement, half_power_widths, ring_from_bins
 from qmeter.estimate.modes import Doubt, Mode, SecondRoute
 from qmeter.uncertainty import NORMAL_95, Figure
+
+Array = npt.NDArray[np.float64]
+Complex = npt.NDArray[np.complex128]
 
 _LEAST_CHANGE = 0.03
 """a change of the loss by less than this is not worth a sentence, however well it is seen"""
 _LEAST_GLIDE_WIDTHS = 0.05
+_LEAST_SAMPLES = 64
+_TIME_CONSTANTS = 7.0
+_BAND_WIDTHS = 16.0
+"""half of a band in decay rates (both per sample): eight half-power widths, each of 2 alpha in rad/s"""
+_LEAST_BINS = 8
 _WORTH_U = 0.25
 """a route that knows Q no better than this, relative, is left out"""
+
+
+def mode_rings(
+    rest: Array, rate_hz: float, poles: Complex, amplitudes: Complex, starts: Sequence[int], noise_psd: Sequence[float]
+) -> list[ModeRing | None]:
+    """The ring of each mode alone, from what is left of the samples when all modes are taken away.
+
+    `rest`: samples from the onset on, less all modes. `poles` (m,): log-poles per sample; `amplitudes` (m,): of Re(A exp(pole n)), n from
+    the onset; `starts` (m,): sample from which each mode is to be read; `noise_psd` (m,): one-sided, per Hz, at each mode. Modes of like
+    start and decay share a transform, of seven to fourteen time constants as far as there are samples. None: fewer
+    than 64 samples are left.
+    """
+    spectra: dict[tuple[int, int], Complex] = {}
+    rings: list[ModeRing | None] = []
+    for pole, amplitude, start, density in zip(poles.tolist(), amplitudes.tolist(), starts, noise_psd, strict=True):
+        left = rest.size - start
+        if left < _LEAST_SAMPLES:
+            rings.append(None)
+            continue
+        length = min(1 << math.ceil(math.log2(max(_TIME_CONSTANTS / max(-pole.real, 1e-12), _LEAST_SAMPLES))), left & ~1)
+        if (start, length) not in spectra:
+            spectra[start, length] = np.asarray(scipy.fft.rfft(rest[start : start + length])) * (2.0 / length)
+        bin_per_sample = 2.0 * math.pi / length
+        centre = round(pole.imag / bin_per_sample)
+        half = max(_LEAST_BINS, math.ceil(_BAND_WIDTHS * -pole.real / bin_per_sample))
+        half = max(min(half, length // 2 - centre - 1), _LEAST_BINS)
+        bins = bins_around(spectra[start, length], np.array([centre - half]), 2 * half)[0]
+        offset_hz = (pole.imag - centre * bin_per_sample) * rate_hz / (2.0 * math.pi)
+        at_start = amplitude * np.exp(pole * start)
+        rings.append(ring_from_bins(bins, half, rate_hz / length, at_start, offset_hz, -pole.real * rate_hz, density))
+    return rings
 
 
 def cross_checked(modes: Sequence[Mode], rings: Sequence[ModeRing | None]) -> tuple[Mode, ...]:
