@@ -143,6 +143,7 @@ def spread_in_time(band: BandProfile, influence: ComplexArray, root_weight: Floa
     weight_t = np.abs(np.fft.ifft(influence / root_weight, axis=-1)) ** 2
     cells = weight_t.shape[-1]
     edges = start_s + length_s * np.arange(cells + 1) / cells
-    p = np.maximum(band.mean_between(edges[:-1] - 0.5 * length_s / cells, edges[1:] - 0.5 * length_s / cells), 1.0)
+    half = 0.5 * length_s / cells
+    p = np.maximum(band.mean_between(np.maximum(edges[:-1] - half, start_s), edges[1:] - half), 1.0)
     p[0] = max(p[0], float(band.mean_between(np.array([start_s]), np.array([edges[1]]))[0]))
     return np.asarray(weight_t @ p / np.sum(weight_t, axis=-1))

@@ -78,12 +78,12 @@ def proposals(suspect: Suspect) -> dict[int, ComplexArray]:
     keep = min(max(int(round(6.0 / np.min(-suspect.pole.real) * k / n)), 16), k - 4, 160)
     part = env[_SKIP : _SKIP + keep]
     out: dict[int, ComplexArray] = {}
-    least = 0.02 / n
+    least = 0.1 / n
     for p, z in zip(ORDERS, pencil_poles(part, ORDERS), strict=True):
         s = np.log(z) * (k / n)
         turn = np.mod(s.imag, 2 * np.pi * k / n) + 2 * np.pi * suspect.first_bin / n
         s = -np.clip(-s.real, least, None) + 1j * turn
-        good = (s.real < -least * 1.01) & (-s.real < 4 * np.max(-suspect.pole.real))
+        good = (np.abs(z) < 1.0 + 2.0 / k) & (-s.real < 4 * np.max(-suspect.pole.real))
         if good.sum() == p:
             out[p] = s[np.argsort(s.imag)]
     return out
@@ -160,4 +160,4 @@ def _sound(fit: RowFit, row: int, suspect: Suspect) -> bool:
     a = -fit.pole[row].real
     u = np.sqrt(np.maximum(np.diagonal(fit.covariance[row])[0::2], 0.0))
     total = np.abs(np.sum(fit.amplitude[row]))
-    return bool(np.all(u < 0.6 * a) and np.max(np.abs(fit.amplitude[row])) < 30 * max(total, np.median(np.abs(fit.amplitude[row]))))
+    return bool(np.all((u < 0.6 * a) | (a * suspect.length < 0.3)) and np.max(np.abs(fit.amplitude[row])) < 30 * max(total, np.median(np.abs(fit.amplitude[row]))))

@@ -13,8 +13,8 @@ import numpy as np
 
 from qmeter.dsp.noise import FloatArray
 from qmeter.estimate.find import Poles, Ring
-from qmeter.estimate.groups import GroupFit, Looks, fit_groups, joint_groups, moved, rest_of
-from qmeter.estimate.poles import IntArray
+from qmeter.estimate.groups import Batch, GroupFit, Looks, fit_groups, joint_groups, moved, rest_of
+from qmeter.estimate.poles import IntArray, RowFit
 from qmeter.estimate.profile import Profiles, best_start, profiles, spread_in_time
 from qmeter.estimate.resolve import resolve
 
@@ -28,6 +28,8 @@ STEADY = 0.15
 """time constants within the whole ring below which a line is as good as a steady tone"""
 SWEEPS = 4
 SPLINTER_WIDTHS = 2.0
+SICK = 1.6
+"""chi2 over its expectation above which a group is fitted from later starts too"""
 LEAST_ENERGY = 40.0
 """(a/u(a))^2 = rho^2/4 must exceed a tenth of this: rho^2 over the local residual"""
 
@@ -76,8 +78,12 @@ def settle(ring: Ring, poles: Poles, contact: int) -> Settled:
     for sweep in range(SWEEPS):
         if not len(poles):
             return _nothing()
-        starts = choose_starts(ring, poles, table)
-        fits = fit_groups(ring, poles, joint_groups(poles, still), starts, Looks(ring, rest), steps=6)
+        shift = onset_shift(ring, poles, rest, contact)
+        starts = choose_starts(ring, poles, table, shift)
+        looks = Looks(ring, rest)
+        fits = fit_groups(ring, poles, joint_groups(poles, still), starts, looks, steps=6)
+        if sweep >= 1:
+            fits = restarted(ring, poles, fits, looks, still)
         before = poles
         poles, keep = moved(poles, fits, loudest, still)
         rest = rest_of(ring, poles)
@@ -114,7 +120,8 @@ def unshattered(poles: Poles) -> Poles:
     kept: list[int] = []
     for i in np.argsort(-energy):
         s, strong = poles.pole[i], poles.pole[kept]
-        splinter = (np.abs(s.imag - strong.imag) < SPLINTER_WIDTHS * 2.0 * -strong.real) & (-s.real < 8.0 * -strong.real)
+        decays = s.real / strong.real
+        splinter = (np.abs(s.imag - strong.imag) < SPLINTER_WIDTHS * 2.0 * -strong.real) & (decays > 0.3) & (decays < 8.0)
         if not np.any(splinter):
             kept.append(int(i))
     return poles.take(np.sort(np.array(kept, dtype=int)))
@@ -140,16 +147,82 @@ def first_starts(poles: Poles, contact: int) -> IntArray:
     return np.minimum(contact, np.floor(FIRST_START / np.maximum(-poles.pole.real, 1e-9))).astype(np.int64)
 
 
-def choose_starts(ring: Ring, poles: Poles, table: Profiles) -> IntArray:
-    """The start of the ladder with the least variance: as early as the residual lets it."""
+def onset_shift(ring: Ring, poles: Poles, rest: FloatArray, contact: int) -> int:
+    """Samples by which the ring begins later than sample 0: the change point between noise and the extrapolated modes.
+
+    It minimises sum_(n < n0) x^2 + sum_(n >= n0) (x - model)^2 over the stretch to the end of contact.
+    """
+    last = min(max(contact, 8), len(rest) - 1)
+    x, r = ring.samples[:last], rest[:last]
+    cost = np.concatenate([[0.0], np.cumsum(x**2 - r**2)])
+    return int(np.argmin(cost)) if len(poles) else 0
+
+
+def choose_starts(ring: Ring, poles: Poles, table: Profiles, shift: int) -> IntArray:
+    """The start of the ladder with the least variance: as early as the residual lets it, but not before the change point."""
     out = np.zeros(len(poles), np.int64)
+    ladder = STARTS_S + shift / ring.rate
     for m, s in enumerate(poles.pole):
         decay = -s.real * ring.rate
-        usable = STARTS_S[STARTS_S * decay < 2.5]
+        usable = ladder[STARTS_S * decay < 2.5]
         band = table.near(s.imag * ring.rate / (2 * np.pi), decay)
         best, _ = best_start(band, decay, usable, max(1e-4, band.step_s))
         out[m] = int(round(usable[best] * ring.rate))
     return np.minimum(out, max(len(ring.samples) - 64, 0))
+
+
+def restarted(ring: Ring, poles: Poles, fits: list[GroupFit], looks: Looks, still: float) -> list[GroupFit]:
+    """Groups that do not reach the noise are fitted from the later starts too; the start with the least u against its own residual stays."""
+    sick: list[tuple[IntArray, int]] = []
+    healthy: list[GroupFit] = []
+    score: dict[tuple[int, ...], tuple[float, GroupFit, int]] = {}
+    for g in fits:
+        bad = g.fit.chi2 / g.freedom > SICK
+        if not bad.any():
+            healthy.append(g)
+            continue
+        for r in range(len(bad)):
+            members = g.batch.members[r]
+            score[tuple(members)] = (_score(g, r), g, r)
+            if bad[r]:
+                sick.append((members, int(g.batch.start[r])))
+    if not sick:
+        return fits
+    for offset in range(1, 7):
+        groups, starts = [], np.zeros(len(poles), np.int64)
+        for members, start in sick:
+            later = STARTS_S[STARTS_S * ring.rate > start + 1]
+            fastest = float(np.max(-poles.pole[members].real)) * ring.rate
+            if len(later) >= offset and (later[offset - 1] - start / ring.rate) * fastest < 1.5:
+                groups.append(members)
+                starts[members] = int(later[offset - 1] * ring.rate)
+        if not groups:
+            break
+        for g in fit_groups(ring, poles, groups, starts, looks, steps=6):
+            for r in range(len(g.batch.members)):
+                key = tuple(g.batch.members[r])
+                value = _score(g, r)
+                if value < 0.9 * score[key][0]:
+                    score[key] = (value, g, r)
+    return healthy + [_one_row(g, r) for _, g, r in score.values()]
+
+
+def _score(g: GroupFit, r: int) -> float:
+    """Sum of ln u(a)/a over a row's modes, u against the row's own residual."""
+    with np.errstate(all="ignore"):
+        excess = max(float(g.fit.chi2[r] / g.freedom[r]), 1.0)
+        variance = np.diagonal(g.fit.covariance[r])[0::2] * excess
+        value = float(np.exp(np.mean(0.5 * np.log(variance / g.fit.pole[r].real ** 2))))
+    return value if np.isfinite(value) else np.inf
+
+
+def _one_row(g: GroupFit, r: int) -> GroupFit:
+    pick = slice(r, r + 1)
+    b, f = g.batch, g.fit
+    return GroupFit(
+        Batch(b.members[pick], b.start[pick], b.rows.take(np.array([r]))),
+        RowFit(f.pole[pick], f.amplitude[pick], f.covariance[pick], f.chi2[pick], f.residual[pick], f.influence[pick]),
+    )
 
 
 def collect(ring: Ring, before: Poles, after: Poles, keep: np.ndarray, fits: list[GroupFit], table: Profiles) -> Settled:
