@@ -306,13 +306,18 @@ def test_bent_decays_are_seen(kind: str, size: float, snr: float) -> None:
 
 
 def test_difference_from_an_efficient_estimator() -> None:
-    """u_other = 5, u_fit = 3: the difference has u = 4 (Hausman 1978), so 12 apart is just at 1; a stated correlation counts."""
-    normalised, agrees = agreement(100.0, 3.0, 112.0, 5.0)
+    """u_other = 13, u_fit = 5: the difference has u = 12 (Hausman 1978), so 36 apart is just at 1.
+
+    A fit that knows less than the other route is not efficient and disagrees with nothing within its own u; a stated correlation and a
+    model part count as they stand.
+    """
+    normalised, agrees = agreement(100.0, 5.0, 136.0, 13.0)
     assert_allclose(normalised, 1.0, rtol=1e-12, atol=0)
     assert agrees
-    assert not agreement(100.0, 3.0, 112.1, 5.0)[1]
+    assert not agreement(100.0, 5.0, 136.1, 13.0)[1]
+    assert agreement(430.0, 120.0, 516.0, 14.0)[1]
     assert_allclose(agreement(100.0, 3.0, 103.0, 4.0, correlation=0.0)[0], 0.2, rtol=1e-12, atol=0)
-    assert_allclose(agreement(100.0, 3.0, 115.0, 5.0, u_apart=3.0)[0], 1.0, rtol=1e-12, atol=0)
+    assert_allclose(agreement(100.0, 5.0, 145.0, 13.0, u_apart=9.0)[0], 1.0, rtol=1e-12, atol=0)
     assert agreement(100.0, 0.0, 100.0, 0.0) == (0.0, True)
     assert agreement(100.0, 0.0, 101.0, 0.0) == (math.inf, False)
 

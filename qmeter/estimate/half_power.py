@@ -274,12 +274,13 @@ def agreement(
 
     Both routes read one record and so share its noise. Without a stated `correlation` the fit is taken to be efficient: what another
     estimator errs by beyond it is then uncorrelated with it, and the variance of the difference is u_other^2 - u_fit^2 (J. A. Hausman,
-    "Specification tests in econometrics", Econometrica 46 (1978) 1251, from memory). `u_fit` is the fit's part alone; what else
-    either may be off by (the model part) goes into `u_apart`, independent of the noise. Difference variances below a tenth of
-    u_other squared are not believed. Three, because twenty modes by two routes make forty comparisons.
+    "Specification tests in econometrics", Econometrica 46 (1978) 1251, from memory). No other route here comes nearer to the bound than
+    a factor of two, so what `u_fit` has beyond half of u_other is no efficient fit's: that counts as independent noise. `u_apart` is
+    what else either may be off by (the model part). Three, because twenty modes by two routes make forty comparisons.
     """
     if correlation is None:
-        variance = max(u_other**2 - u_fit**2, 0.1 * u_other**2)
+        efficient = min(u_fit, 0.5 * u_other)
+        variance = u_other**2 - efficient**2 + (u_fit**2 - efficient**2)
     else:
         variance = u_fit**2 + u_other**2 - 2.0 * correlation * u_fit * u_other
     combined = math.sqrt(variance + u_apart**2)

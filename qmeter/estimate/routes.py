@@ -22,7 +22,7 @@ Complex = npt.NDArray[np.complex128]
 
 _LEAST_CHANGE = 0.03
 """a change of the loss by less than this is not worth a sentence, however well it is seen"""
-_LEAST_GLIDE_WIDTHS = 0.05
+_LEAST_GLIDE_WIDTHS = 0.1
 _LEAST_SAMPLES = 64
 _TIME_CONSTANTS = 7.0
 _BAND_WIDTHS = 16.0
@@ -38,7 +38,8 @@ def mode_rings(
     """The ring of each mode alone, from what is left of the samples when all modes are taken away.
 
     `rest`: samples from the onset on, less all modes. `poles` (m,): log-poles per sample; `amplitudes` (m,): of Re(A exp(pole n)), n from
-    the onset; `starts` (m,): sample from which each mode is to be read; `noise_psd` (m,): one-sided, per Hz, at each mode. Modes of like
+    the onset; `starts` (m,): sample from which each mode is to be read; `noise_psd` (m,): one-sided, per Hz, at each mode; what is
+    left in a mode's band counts where it is more. Modes of like
     start and decay share a transform, of seven to fourteen time constants as far as there are samples. None: fewer
     than 64 samples are left.
     """
@@ -59,7 +60,10 @@ def mode_rings(
         bins = bins_around(spectra[start, length], np.array([centre - half]), 2 * half)[0]
         offset_hz = (pole.imag - centre * bin_per_sample) * rate_hz / (2.0 * math.pi)
         at_start = amplitude * np.exp(pole * start)
-        rings.append(ring_from_bins(bins, half, rate_hz / length, at_start, offset_hz, -pole.real * rate_hz, density))
+        bin_hz = rate_hz / length
+        # clutter stands above the noise; the median keeps what a wrong fit leaves at the line itself out of it
+        clutter = float(np.median(np.abs(bins) ** 2)) / (math.log(2.0) * 2.0 * bin_hz)
+        rings.append(ring_from_bins(bins, half, bin_hz, at_start, offset_hz, -pole.real * rate_hz, max(density, clutter)))
     return rings
 
 
@@ -81,9 +85,10 @@ def _checked(mode: Mode, q_width: float, u_width: float, backward: Backward, ben
     half_power = _route(mode, q_width, u_width)
     integral = _route(mode, *backward.q(mode.damped_frequency_hz))
     doubts = list(mode.doubts)
-    for route, name in ((half_power, "half-power width"), (integral, "backward-integrated decay")):
-        if route is not None and not route.agrees:
-            doubts.append(_disagrees(mode, route, name))
+    named = (("half-power width", half_power), ("backward-integrated decay", integral))
+    differing = [(name, route) for name, route in named if route is not None and not route.agrees]
+    if differing:
+        doubts.append(_differ(mode, differing))
     if bent is not None:
         doubts += _bent(mode, bent)
     return replace(mode, half_power=half_power, backward_integral=integral, doubts=tuple(doubts))
@@ -108,12 +113,12 @@ def _route(mode: Mode, q: float, u: float) -> SecondRoute | None:
     return SecondRoute(Figure(q, NORMAL_95 * u), agrees)
 
 
-def _disagrees(mode: Mode, route: SecondRoute, name: str) -> Doubt:
-    fit = mode.q
+def _differ(mode: Mode, routes: Sequence[tuple[str, SecondRoute]]) -> Doubt:
+    others = ", ".join(f"the {name} {_plus_minus(route.q)}" for name, route in routes)
     return Doubt(
-        "routes-disagree",
-        f"The {name} gives Q = {_plus_minus(route.q)}, the fit of the decay {_plus_minus(fit)}: further apart than the noise allows. "
-        "Something else rings in this band, or the loss changes as it decays: trust neither beyond their difference.",
+        "routes-differ",
+        f"The fit of the decay gives Q = {_plus_minus(mode.q)}, {others}: further apart than the noise allows. Something else rings in "
+        "this band, or the loss changes as it decays: trust none beyond their difference.",
     )
 
 
@@ -124,35 +129,29 @@ def _plus_minus(figure: Figure) -> str:
 
 
 def _bent(mode: Mode, bent: Bend) -> list[Doubt]:
-    """Sentences for a loss and for a frequency that change with the level, where they change by enough to matter."""
+    """One doubt where loss or frequency change with the level, and by enough to matter."""
     early, late = bent.early, bent.late
     f = mode.damped_frequency_hz
-    doubts = []
+    says = []
     change = abs(late.decay_rate_per_s / early.decay_rate_per_s - 1.0)
     if bent.is_curved and min(early.decay_rate_per_s, late.decay_rate_per_s) > 0.0 and change > _LEAST_CHANGE:
         q_early, q_late = (relations.q_from_damped(f, slope.decay_rate_per_s) for slope in (early, late))
-        doubts.append(
-            Doubt(
-                "curved-decay",
-                f"The decay is not straight: Q is {q_early:.3g} {_between(early)} and {q_late:.3g} {_between(late)}. The loss depends on "
-                "the amplitude, or two modes share the band; strike more softly to see which, and give Q with its range.",
-            )
-        )
+        says.append(f"The decay is not straight: Q is {q_early:.3g} {_between(early)} below the strike and {q_late:.3g} {_between(late)}.")
     glide = late.offset_hz - early.offset_hz
     if bent.is_gliding and abs(glide) > _LEAST_GLIDE_WIDTHS * mode.amplitude_decay_rate_per_s / math.pi:
-        doubts.append(
-            Doubt(
-                "gliding",
-                f"The frequency {'falls' if glide < 0.0 else 'rises'} by {abs(glide):.2g} Hz ({100 * abs(glide) / f:.2g} %) from "
-                f"{_range(early)} to {_range(late)} below the strike: no one frequency is right. Strike more softly.",
-            )
-        )
-    return doubts
+        way = "falls" if glide < 0.0 else "rises"
+        from_to = f"the first {-early.to_db:.0f} dB to the next {early.to_db - late.to_db:.0f} dB"
+        says.append(f"The frequency {way} by {_two_digits(abs(glide))} Hz ({_two_digits(100 * abs(glide) / f)} %) from {from_to}.")
+    if not says:
+        return []
+    says.append("It depends on the amplitude, or two modes share the band: tap softer and compare, and give the range with the figure.")
+    return [Doubt("curved-decay", " ".join(says))]
 
 
 def _between(slope: Slope) -> str:
     return f"from {-slope.from_db + 0.0:.0f} to {-slope.to_db:.0f} dB"
 
 
-def _range(slope: Slope) -> str:
-    return f"{-slope.from_db + 0.0:.0f}-{-slope.to_db:.0f} dB"
+def _two_digits(value: float) -> str:
+    """Two significant digits without a power of ten."""
+    return f"{float(f'{value:.2g}'):g}"
