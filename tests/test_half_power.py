@@ -138,7 +138,8 @@ def test_rings_from_bins(q: float) -> None:
     found, u = np.array([(w.decay_rate_per_s, w.u_decay_rate_per_s) for w in half_power_widths(made)]).T
     held, rms = shares(found, u, decay)
     assert 0.92 - 0.015 <= held <= 0.98 + 0.015
-    assert 0.9 <= rms <= 1.15
+    # sampling: 2.2 % sd; at Q = 4, some eight cycles in the record, u is 4 % too large
+    assert 0.88 <= rms <= 1.1
 
 
 def test_no_ring_no_width() -> None:
