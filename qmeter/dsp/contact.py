@@ -6,6 +6,8 @@ a force that acts on them is not: the residual is large while the contact lasts 
 
 from __future__ import annotations
 
+import math
+
 import numpy as np
 import scipy.fft
 import scipy.linalg
@@ -13,7 +15,7 @@ from numpy.typing import NDArray
 
 FloatArray = NDArray[np.float64]
 
-CHANGE_RATIO = 15.0
+CHANGE_RATIO = 60.0
 """power ratio for which the change point is tuned: larger is later"""
 SHORTEST_CONTACT_S, LONGEST_CONTACT_S = 0.0002, 0.0026
 TRAINING_S = 0.15
@@ -79,7 +81,7 @@ def _quiet_power(x: FloatArray, hop: int) -> float:
 
 def change_point(residual: FloatArray, power: float) -> int:
     """Index at which the power of `residual` leaves `power` (minimum of the CUSUM before it has clearly risen)."""
-    gain = np.minimum(residual**2 / power, 400.0) * (0.5 * (1.0 - 1.0 / CHANGE_RATIO)) - 0.5 * np.log(CHANGE_RATIO)
+    gain = np.minimum(residual**2 / power, 20.0) * (0.5 * (1.0 - 1.0 / CHANGE_RATIO)) - 0.5 * np.log(CHANGE_RATIO)
     walk = np.concatenate([[0.0], np.cumsum(gain)])
     rise = walk - np.minimum.accumulate(walk)
     clear = np.flatnonzero(rise > min(40.0, 0.9 * float(rise.max())))
@@ -115,9 +117,7 @@ def second_contact(x: FloatArray, rate: float, onset: int, end: int) -> tuple[in
     """Sample of a second contact 3 to 75 ms after the onset (or None), and the sample where the first one ended.
 
     A predictor that runs backward in time, trained on the ring after the first contact, is silent from the end of a
-    contact on: what is loud after LONGEST_CONTACT_S is another one, or a knock that died away while it was trained on.
-    The second look is trained on what comes after the knock, by a long and by a short predictor (the short one sees
-    the gap between contacts 3 ms apart).
+    contact on: what is loud after LONGEST_CONTACT_S is another one, to be confirmed by `_confirmed`.
     """
     shortest = min(onset + max(int(SHORTEST_CONTACT_S * rate), 1), x.size)
     factor = max(int(rate / 44000.0), 1)
@@ -125,26 +125,27 @@ def second_contact(x: FloatArray, rate: float, onset: int, end: int) -> tuple[in
     ring = x[onset : onset + (last - onset) // factor * factor].reshape(-1, factor).mean(axis=1)
     ring_rate = rate / factor
     skip = int(LONGEST_CONTACT_S * ring_rate)
-    order = min(LONG_ORDER, (ring.size - skip) // 10)
-    if order < 12:
+    if ring.size < 0.03 * ring_rate:
         return None, shortest
-    residual, floor = _backward_residual(ring, skip, order)
+    residual, floor = _backward_residual(ring, skip, LONG_ORDER, 10)
     contact_end = min(max(onset + _first_contact(residual, ring_rate, skip, floor) * factor, shortest), x.size)
     second = None
-    if _latest_force(residual, ring_rate, skip, floor) is not None:
+    if _latest_force(residual, floor, ring_rate, skip) is not None:
         second = _confirmed(ring, ring_rate, skip)
     return (None if second is None else onset + second * factor), contact_end
 
 
 def _confirmed(ring: FloatArray, rate: float, skip: int) -> int | None:
-    """The second look: index of the second contact, or None. See `second_contact`."""
+    """The second look: index of the second contact, or None.
+
+    First with a predictor twice as long (a dense ring outlasts the short one), then with two trained on what comes
+    after a knock, of which either must agree, the second contact being no tick beside the first.
+    """
+    if _latest_force(*_backward_residual(ring, skip, 2 * LONG_ORDER, 8), rate, skip) is None:
+        return None
     for longest, from_s in ((LONG_ORDER, 0.012), (SHORT_ORDER, 0.008)):
-        later = int(from_s * rate)
-        order = min(longest, (ring.size - later) // 10)
-        if order < 12:
-            continue
-        residual, floor = _backward_residual(ring, later, order)
-        second = _latest_force(residual, rate, skip, floor)
+        residual, floor = _backward_residual(ring, int(from_s * rate), longest, 10)
+        second = _latest_force(residual, floor, rate, skip)
         if second is not None and _share(residual, rate, skip, second) > LEAST_SHARE:
             return second
     return None
@@ -161,8 +162,12 @@ def _share(residual: FloatArray, rate: float, skip: int, second: int) -> float:
     return (float(around.max(initial=0.0)) - typical) / first if first > 0.0 else 1.0
 
 
-def _backward_residual(ring: FloatArray, train_from: int, order: int) -> tuple[FloatArray, float]:
-    """Residual of the backward predictor trained on ring[train_from:], and the power that rounding alone leaves in it."""
+def _backward_residual(ring: FloatArray, train_from: int, longest: int, samples_each: int) -> tuple[FloatArray, float]:
+    """Residual of the backward predictor trained on ring[train_from:], and the power that rounding alone leaves in it.
+
+    Its order is `longest`, or less to leave `samples_each` samples a coefficient.
+    """
+    order = max(min(longest, (ring.size - train_from) // samples_each), 4)
     error_filter = backward_predictor(ring[train_from:], order)
     length = scipy.fft.next_fast_len(ring.size + order, real=True)
     spectrum = scipy.fft.rfft(ring, length) * np.conj(scipy.fft.rfft(error_filter, length))
@@ -179,7 +184,7 @@ def _first_contact(residual: FloatArray, rate: float, skip: int, floor: float) -
     return 0 if early.size == 0 else int(early[-1]) + width // 2
 
 
-def _latest_force(residual: FloatArray, rate: float, skip: int, floor: float) -> int | None:
+def _latest_force(residual: FloatArray, floor: float, rate: float, skip: int) -> int | None:
     """Index of a rise of the residual's power after `skip`, or None.
 
     It is held against the 12 ms that follow (a residual may decay slowly), against the least of what came before (a
@@ -223,18 +228,19 @@ def _rounding_power(x: FloatArray) -> float:
 def is_clipped(x: FloatArray) -> bool:
     """Whether samples pile up at the strike's largest or smallest value, as under a limiter or a full-scale stop.
 
-    Near a natural peak (a parabola) the number of samples within d of it goes as sqrt(d): 2.2 times as many lie in the
-    next nine steps as in the first. Under a ceiling nearly all lie in the first.
+    Near a natural peak (a parabola) the number of samples within d of it goes as sqrt(d), so that the first step holds
+    a tenth of those within a hundred; under a ceiling it holds most. Coarse samples (below a hundred steps) are not
+    judged.
     """
     largest = float(np.abs(x).max(initial=0.0))
+    step = max(2.0**-15, math.sqrt(12.0 * _rounding_power(x))) * 1.05
     for side in (x, -x):
         top = float(side.max(initial=0.0))
-        step = max(2.0**-15 * 1.05, 1e-5 * top)
-        if top < 0.2 * largest or top < 40 * step:
+        if top < 0.2 * largest or top < 100.0 * step:
             continue
-        near = side > top - 10 * step
         at = side > top - step
         count = int(np.count_nonzero(at))
-        if count >= 3 and count > 2 * (int(np.count_nonzero(near)) - count) and bool(np.any(at[1:] & at[:-1])):
+        near, wide = (int(np.count_nonzero(side > top - n * step)) for n in (10, 100))
+        if count >= 4 and count > 2 * (near - count) and count > 0.4 * wide and bool(np.any(at[1:] & at[:-1])):
             return True
     return False

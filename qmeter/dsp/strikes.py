@@ -9,7 +9,7 @@ below the threshold. The sample of the onset comes from `qmeter.dsp.contact`.
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 import scipy.fft
@@ -94,6 +94,9 @@ def find_strikes(samples: FloatArray, rate: float) -> tuple[StrikeSpan, ...]:
     events = _events(frames)
     if not events and _falls(frames):
         events = [0]
+    if events and events[0] >= 8:  # the tail may ring to the end, the start did not
+        before = frames.energy[: events[0] - 1].mean(axis=0)
+        frames = replace(frames, noise=np.minimum(frames.noise, before))
     return _spans(x, rate, frames, events)
 
 
@@ -225,7 +228,7 @@ def _span(
     noise = frames.noise
     first, last = quiet_from // frames.hop + 1, quiet_to // frames.hop - 1
     if last - first >= 8:
-        noise = np.maximum(noise, frames.energy[first:last].mean(axis=0))
+        noise = frames.energy[first:last].mean(axis=0)
     met = _meets_noise(frames, noise, onset, end)
     if quiet_to == quiet_from:  # the noise was taken from the tail, which may still ring
         met = met and not (_still_falls(frames, onset, end, 4) and _still_falls(frames, onset, end, 8))
@@ -279,11 +282,11 @@ def _quiet(rate: float, frames: _Frames, onset: int, before: int | None) -> tupl
 
 
 def _meets_noise(frames: _Frames, noise: FloatArray, onset: int, end: int) -> bool:
-    """Whether the last 20 ms of the span are at the noise in every band."""
+    """Whether the last 20 ms of the span are within 7 to 10 dB of the noise in every band (of 5 ms frames)."""
     last = max(end // frames.hop - 1, 1)
     first = max(last - 8, min(onset // frames.hop + 1, last - 1))
     level = frames.energy[first:last].mean(axis=0)
-    return bool(np.all(level < noise * (1.0 + 5.0 / np.sqrt(frames.bins))))
+    return bool(np.all(level < noise * (4.0 + 5.0 / np.sqrt(frames.bins))))
 
 
 def _still_falls(frames: _Frames, onset: int, end: int, part: int) -> bool:
