@@ -353,7 +353,7 @@ def test_pooled_page_names_files_and_mountings() -> None:
     modes = tuple(fakes.mode(hertz, 61.2, strikes=9, mounting=0.05) for hertz in (184.12, 351.06))
     pooled = Pooled(("a.wav", "b.wav", "c.wav"), ("hung", "hung", "foam"), modes, (fakes.CLIPPED,))
     rows = lines_of(table.render_pooled(pooled, 120))
-    assert rows[0] == "pooled over 3 files, 2 mountings: hung (2) and foam (1)"
+    assert rows[0] == "pooled over 3 files, 2 mountings: hung (2 files) and foam (1 file)"
     assert sum("mounting" in row for row in rows[5:10]) == 2
     assert plain.render_pooled(pooled).splitlines()[0] == rows[0]
 

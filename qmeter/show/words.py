@@ -110,9 +110,14 @@ def _number(name: str) -> float:
 def pooled_title(files: Sequence[str], mountings: Sequence[str | None]) -> str:
     """How many files and which ways of holding were pooled."""
     names = list(dict.fromkeys(mountings))
-    counts = [f"{name or 'not named'} ({mountings.count(name)})" for name in names]
+    counts = [f"{name or 'not named'} ({files_counted(mountings.count(name))})" for name in names]
     held = "one mounting" if len(names) == 1 else f"{len(names)} mountings: {listed(counts)}"
-    return f"pooled over {len(files)} {'file' if len(files) == 1 else 'files'}, {held}"
+    return f"pooled over {files_counted(len(files))}, {held}"
+
+
+def files_counted(number: int) -> str:
+    """ "1 file", "2 files"."""
+    return "1 file" if number == 1 else f"{number} files"
 
 
 def beats(modes: Sequence[Mode], *, all_of_them: bool) -> list[str]:
