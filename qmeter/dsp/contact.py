@@ -21,7 +21,7 @@ SHORTEST_CONTACT_S, LONGEST_CONTACT_S = 0.0002, 0.0026
 TRAINING_S = 0.15
 LONG_ORDER, SHORT_ORDER = 320, 96
 """7 ms at 48 kHz: forty modes and the noise between them; and 2 ms"""
-UNSTEADY = 3.0
+UNSTEADY = 2.0
 """a residual that still decays (a knock's tail) also scatters more: the threshold grows with it up to this factor"""
 LEAST_SHARE = 10**-2.9
 """power of a second contact's residual over the first's: a tenth of the force, and a longer contact"""
@@ -30,9 +30,12 @@ SECOND_WINDOWS_S = (0.0003, 0.001, 0.002, 0.005)
 FEWEST = 12
 """samples of a window: fewer scatter too much"""
 SECOND_SAMPLES, SECOND_RATIOS = (14, 48, 96, 240, 960), (4.3, 2.6, 2.1, 1.8, 1.6)
-"""power ratio beyond which a window of so many samples holds a second contact. From simulated strikes: 250 with up to
-ten modes gave no false one, those with forty 1 to 5 %; 98 % of second contacts of a tenth to all of the first's force
-are found"""
+"""Power ratio beyond which a window of so many samples holds a second contact.
+
+Measured on simulated strikes at 44.1 to 96 kHz: none of 640 clean ones with up to ten modes called double, 3 to 10 % of
+those with 240 modes; 248 of 249 bounces of 30 to 90 % of the force at 40 to 60 dB marked, 93 to 97 % of those of 10 to
+100 % at 25 to 60 dB. At 8 kHz some 70 %: the predictor is then as long as the gap.
+"""
 
 
 def predictor(x: FloatArray, order: int, ridge: float = 1e-9) -> FloatArray:
