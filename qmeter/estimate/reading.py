@@ -2,103 +2,207 @@
 
 from __future__ import annotations
 
-from dataclasses import replace
+from dataclasses import dataclass, replace
 
 import numpy as np
 
-from qmeter.dsp.noise import FloatArray, NoiseSpectrum, noise_spectrum, white_noise
+from qmeter.dsp.noise import FloatArray, NoiseSpectrum
 from qmeter.dsp.strikes import StrikeSpan
+from qmeter.estimate import doubts
 from qmeter.estimate.find import Ring, find_modes
-from qmeter.estimate.modes import Doubt, Mode, Settings, Spread, Strike
-from qmeter.estimate.settle import Settled, settle
+from qmeter.estimate.groups import rest_of
+from qmeter.estimate.half_power import ModeRing
+from qmeter.estimate.hearing import Heard, growth_db, heard, is_driven, unexplained
+from qmeter.estimate.modes import DecayTrace, Doubt, Mode, Settings, Spread, Strike
+from qmeter.estimate.pool import clock_part
+from qmeter.estimate.routes import cross_checked, mode_rings
+from qmeter.estimate.settle import SHORTEST, Settled, settle
 
-LOWEST_HZ = 20.0
-HIGHEST_OF_RATE = 0.45
-_QUIET_LEAST_S = 0.02
-_QUIET_LEAST_FRAMES = 512
+_DB_PER_NEPER = 8.685889638
+_TRACE_POINTS = 240
+_LOUD_DB = 10.0
+"""a strike is cut off when one of its modes this near to the strongest is"""
+_SILENT = 1e-10
+"""-200 dBFS: what a level of nothing is written as"""
 
 
-def read_strike(samples: FloatArray, rate: float, span: StrikeSpan, settings: Settings) -> Strike:
-    """The reading of one strike of `samples` (one channel, full scale 1)."""
-    quiet = samples[span.quiet_from : span.quiet_to]
-    ring = ring_of(samples, rate, span, settings)
-    found = find_modes(ring)
-    settled = settle(ring, found, span.contact_end - span.onset)
-    modes = _modes(ring, settled, settings)
-    noise_dbfs = _dbfs(float(np.sqrt(np.mean(np.square(quiet - np.mean(quiet)))))) if len(quiet) > 16 else _dbfs(float(np.sqrt(ring.noise.psd[-1] * rate / 2)))
-    return Strike(
+@dataclass(frozen=True, slots=True)
+class Reading:
+    """A strike, whether something spoils it though modes rang, and the noise before it."""
+
+    strike: Strike
+    spoiled: bool
+    noise: NoiseSpectrum | None
+
+
+def read_strike(samples: FloatArray, rate: float, span: StrikeSpan, settings: Settings, quantum: float = 0.0) -> Reading:
+    """The reading of one strike of `samples` (one channel, full scale 1); `quantum` is the step of the samples."""
+    what = heard(samples, rate, span, quantum)
+    said = _contact_doubts(span, rate)
+    modes: tuple[Mode, ...] = ()
+    cut: list[Doubt] = []
+    if len(what.ring.samples) < SHORTEST:
+        said.append(doubts.too_short(len(what.ring.samples) / rate))
+    else:
+        modes, reason = _rung(what, span, settings)
+        if not modes:
+            said.append(reason or doubts.nothing_rang(_dbfs(span.peak), _dbfs(what.noise_rms)))
+        elif span.cut_by_end or span.cut_by_next or _short(modes, len(what.ring.samples) / rate):
+            cut.append(doubts.strike_cut_off(span, (span.end - span.onset) / rate, _end_over_noise_db(what)))
+    strike = Strike(
         onset_s=span.onset / rate,
         usable_s=span.usable / rate,
         peak_dbfs=_dbfs(span.peak),
-        noise_dbfs=noise_dbfs,
+        noise_dbfs=_dbfs(what.noise_rms),
         accepted=bool(modes),
-        doubts=(),
+        doubts=(*said, *cut),
         modes=modes,
+    )
+    spoiled = bool(modes) and (span.clipped or span.second_contact is not None or _short(modes, len(what.ring.samples) / rate))
+    return Reading(strike, spoiled, what.ring.noise)
+
+
+def _contact_doubts(span: StrikeSpan, rate: float) -> list[Doubt]:
+    said = []
+    if span.clipped:
+        said.append(doubts.clipped(_dbfs(span.peak)))
+    if span.second_contact is not None:
+        said.append(doubts.double_strike((span.second_contact - span.onset) / rate))
+    return said
+
+
+def _rung(what: Heard, span: StrikeSpan, settings: Settings) -> tuple[tuple[Mode, ...], Doubt | None]:
+    """The modes of a ring, checked and doubted, or why there are none."""
+    ring, contact = what.ring, what.contact
+    grows = growth_db(ring)
+    try:
+        # rows that run away in a fit overflow; what they come to is not finite, and is dropped
+        with np.errstate(all="ignore"):
+            found = find_modes(ring)
+            if len(found) and is_driven(ring, found, contact):
+                return (), doubts.driven(grows, unexplained(ring, found, contact))
+            settled = _finite(settle(ring, found, contact))
+            if len(settled.poles) and is_driven(ring, settled.poles, contact):
+                return (), doubts.driven(grows, unexplained(ring, settled.poles, contact))
+            if not len(settled.poles):
+                return (), None
+            modes = _modes(ring, settled, settings)
+            return _doubted(what, span, settled, modes), None
+    except np.linalg.LinAlgError:
+        return (), None
+
+
+def _finite(s: Settled) -> Settled:
+    """Modes all of whose numbers are numbers."""
+    ok = np.isfinite(s.poles.pole) & np.isfinite(s.poles.amplitude) & (np.abs(s.poles.amplitude) > 0) & (s.poles.pole.real < 0)
+    variance = np.diagonal(s.covariance, axis1=1, axis2=2)
+    return s.take(ok & np.all(np.isfinite(s.covariance), axis=(1, 2)) & np.all(variance > 0, axis=1))
+
+
+def _modes(ring: Ring, s: Settled, settings: Settings, model: FloatArray | None = None) -> list[Mode]:
+    """Result objects in the order of the poles.
+
+    `model`: (M, 2, 2) covariance of (alpha, omega) per sample of what the model leaves out, found by fitting from other starts, over
+    other lengths and windows; it becomes that part of the budget.
+    """
+    rate = ring.rate
+    level = 20.0 * np.log10(np.abs(s.poles.amplitude))
+    modes = []
+    for i, pole in enumerate(s.poles.pole):
+        decay, hz = float(-pole.real * rate), float(pole.imag * rate / (2.0 * np.pi))
+        budget = {"fit": _spread(s.covariance[i], rate)}
+        if model is not None:
+            budget["model"] = _spread(model[i], rate)
+        noise_db = 10.0 * np.log10(float(ring.noise.at(hz)) * decay / np.pi)
+        snr = float(level[i] - 3.0103 - noise_db)
+        seen = decay * min(float(s.length[i]), len(ring.samples) - float(s.start[i])) / rate
+        modes.append(
+            Mode(
+                damped_frequency_hz=hz,
+                amplitude_decay_rate_per_s=decay,
+                amplitude=complex(s.poles.amplitude[i]),
+                budget=budget | clock_part(hz, decay, settings.clock_ppm),
+                level_db=float(level[i] - np.max(level)),
+                level_dbfs=float(level[i]),
+                snr_db=snr,
+                decay_range_db=max(min(_DB_PER_NEPER * seen, snr - _DB_PER_NEPER * decay * float(s.start[i]) / rate), 0.0),
+            )
+        )
+    return modes
+
+
+def _spread(covariance: FloatArray, rate: float) -> Spread:
+    """(alpha, omega) per sample to (Hz, 1/s)."""
+    to_hz = rate / (2.0 * np.pi)
+    return Spread(float(covariance[1, 1] * to_hz**2), float(covariance[0, 0] * rate**2), float(covariance[0, 1] * rate * to_hz))
+
+
+def _doubted(what: Heard, span: StrikeSpan, s: Settled, modes: list[Mode]) -> tuple[Mode, ...]:
+    """The modes with their other routes, decay strips and doubts; strongest first."""
+    ring = what.ring
+    cut = span.cut_by_end or span.cut_by_next
+    paired = doubts.close_pairs(modes)
+    own: list[Mode] = []
+    for i, mode in enumerate(modes):
+        said = [paired[i], doubts.filter_limited(mode, ring.low_hz, ring.high_hz)]
+        seen_s = len(ring.samples) / ring.rate
+        nepers = mode.amplitude_decay_rate_per_s * seen_s
+        over = mode.snr_db - _DB_PER_NEPER * nepers
+        if over > doubts.CUT_DB and (cut or nepers < doubts.TIME_CONSTANTS_WANTED):
+            said.append(doubts.mode_cut_off(mode.amplitude_decay_rate_per_s, seen_s, over))
+        elif mode.decay_range_db < doubts.FEW_DB:
+            said.append(doubts.few_decibels(mode.decay_range_db))
+        own.append(replace(mode, doubts=tuple(doubt for doubt in said if doubt is not None)))
+    rings = _rings(ring, s)
+    checked = cross_checked(own, rings)
+    drawn = [replace(mode, trace=_trace(mode, r, s, i, what)) for i, (mode, r) in enumerate(zip(checked, rings, strict=True))]
+    return tuple(sorted(drawn, key=lambda mode: -mode.level_db))
+
+
+def _rings(ring: Ring, s: Settled) -> list[ModeRing | None]:
+    hz = s.poles.pole.imag * ring.rate / (2.0 * np.pi)
+    rest = rest_of(ring, s.poles)
+    return mode_rings(rest, ring.rate, s.poles.pole, s.poles.amplitude, s.start.tolist(), ring.noise.at(hz).tolist())
+
+
+def _trace(mode: Mode, alone: ModeRing | None, s: Settled, i: int, what: Heard) -> DecayTrace | None:
+    """The envelope of the mode's band, and the fitted line down to the noise in it."""
+    if alone is None or not np.iscomplexobj(alone.samples):
+        return None
+    power = np.abs(alone.samples) ** 2
+    join = -(-len(power) // _TRACE_POINTS)
+    joined = power[: len(power) // join * join].reshape(-1, join).mean(axis=1)
+    step = alone.step_s * join
+    decay = mode.amplitude_decay_rate_per_s
+    start = float(s.start[i]) / what.ring.rate
+    floor = float(10.0 * np.log10(max(alone.noise_variance, _SILENT**2)))
+    top = mode.level_dbfs - _DB_PER_NEPER * decay * start
+    until = min(
+        (top - floor) / (_DB_PER_NEPER * decay), float(s.length[i]) / what.ring.rate, len(what.ring.samples) / what.ring.rate - start
+    )
+    until = max(until, step)
+    levels = tuple(float(x) for x in 10.0 * np.log10(np.maximum(joined, _SILENT**2)))
+    return DecayTrace(
+        start + 0.5 * (step - alone.step_s), step, levels, floor, start, start + until, (top, top - _DB_PER_NEPER * decay * until)
     )
 
 
-def ring_of(samples: FloatArray, rate: float, span: StrikeSpan, settings: Settings) -> Ring:
-    """The samples from the onset on, with the offset of the quiet taken away, and the noise spectrum."""
-    quiet = samples[span.quiet_from : span.quiet_to]
-    piece = samples[span.onset : span.end]
-    if len(quiet) >= max(_QUIET_LEAST_S * rate, _QUIET_LEAST_FRAMES):
-        noise = noise_spectrum(quiet, rate)
-        offset = float(np.mean(quiet))
-    else:
-        noise = _noise_of_tail(piece, rate)
-        offset = float(np.mean(piece[-len(piece) // 4 :]))
-    low, high = settings.range_hz or (LOWEST_HZ, HIGHEST_OF_RATE * rate)
-    return Ring(piece - offset, rate, noise, max(low, LOWEST_HZ), min(high, HIGHEST_OF_RATE * rate))
+def _short(modes: tuple[Mode, ...], seen_s: float) -> bool:
+    """Whether a loud mode of the strike is cut off before it has fallen far enough."""
+    return any(
+        mode.level_db > -_LOUD_DB
+        and mode.amplitude_decay_rate_per_s * seen_s < doubts.TIME_CONSTANTS_WANTED
+        and mode.snr_db - _DB_PER_NEPER * mode.amplitude_decay_rate_per_s * seen_s > doubts.CUT_DB
+        for mode in modes
+    )
 
 
-def _noise_of_tail(piece: FloatArray, rate: float) -> NoiseSpectrum:
-    """Noise from the last quarter of the ring, lines left out."""
-    tail = piece[-max(len(piece) // 4, 64) :]
-    if len(tail) < 128:
-        return white_noise(float(np.var(tail)) * 2 / rate + 1e-20, rate)
-    return noise_spectrum(tail, rate)
-
-
-def _modes(ring: Ring, s: Settled, settings: Settings) -> tuple[Mode, ...]:
-    """Result objects, strongest first."""
-    if not len(s.poles):
-        return ()
-    rate = ring.rate
-    to_si = np.array([rate, rate / (2 * np.pi)])
-    level = 20 * np.log10(np.abs(s.poles.amplitude))
-    order = np.argsort(-level)
-    modes = []
-    for i in order:
-        pole = s.poles.pole[i]
-        decay, hz = -pole.real * rate, pole.imag * rate / (2 * np.pi)
-        cov = s.covariance[i] * to_si[:, None] * to_si[None, :]
-        budget = {"fit": Spread(float(cov[1, 1]), float(cov[0, 0]), float(cov[0, 1]))}
-        if settings.clock_ppm:
-            budget["clock"] = clock_spread(hz, decay, settings.clock_ppm)
-        noise_rms = float(np.sqrt(ring.noise.at(hz) * decay / np.pi))
-        modes.append(
-            Mode(
-                damped_frequency_hz=float(hz),
-                amplitude_decay_rate_per_s=float(decay),
-                amplitude=complex(s.poles.amplitude[i]),
-                budget=budget,
-                level_db=float(level[i] - level[order[0]]),
-                level_dbfs=float(level[i]),
-                snr_db=float(level[i] - 3.0103 - 20 * np.log10(noise_rms)),
-                decay_range_db=float(min(8.6859 * decay * s.length[i] / rate, level[i] - 20 * np.log10(noise_rms))),
-            )
-        )
-    return tuple(modes)
-
-
-def clock_spread(hz: float, decay: float, ppm: float) -> Spread:
-    """The sample clock's part: rectangular of half-width `ppm`, on frequency and decay rate alike (so Q does not feel it)."""
-    relative = (ppm * 1e-6) ** 2 / 3.0
-    return Spread(relative * hz**2, relative * decay**2, relative * hz * decay)
+def _end_over_noise_db(what: Heard) -> float | None:
+    """Level of the last 20 ms over the noise; None where it does not stand above it."""
+    last = what.ring.samples[-max(int(0.02 * what.ring.rate), 16) :]
+    over = _dbfs(float(np.sqrt(np.mean(last**2)))) - _dbfs(what.noise_rms)
+    return over if over > 3.0 else None
 
 
 def _dbfs(level: float) -> float:
-    return float(20 * np.log10(max(level, 1e-10)))
-
-
-__all__ = ["Doubt", "clock_spread", "read_strike", "replace", "ring_of"]
+    return float(20.0 * np.log10(max(level, _SILENT)))

@@ -1,0 +1,141 @@
+"""From a span of the recording to the ring to be fitted: its samples, the noise it stands in, and whether it rings at all."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass, replace
+
+import numpy as np
+
+from qmeter.dsp.noise import FloatArray, NoiseSpectrum, noise_spectrum, white_noise
+from qmeter.dsp.strikes import StrikeSpan
+from qmeter.estimate.find import Poles, Ring
+from qmeter.estimate.groups import rest_of
+
+LOWEST_HZ = 20.0
+HIGHEST_OF_RATE = 0.45
+_QUIET_LEAST_S = 0.02
+_QUIET_LEAST_FRAMES = 512
+_TAIL_LEAST_FRAMES = 128
+_STUCK_S = 0.005
+"""samples that do not change for so long at the end are a gate or a file's padding, and no part of the ring"""
+_FLOAT_STEP = 2.0**-23
+"""of the peak: what is left when the samples are on no grid; the resolution of a float32, and of 24 bits"""
+_HEARD_S = 0.3
+"""speech is judged over its first syllable"""
+_WINDOW_S = 0.008
+GROWS_DB = 1.0
+UNEXPLAINED = 0.5
+
+
+@dataclass(frozen=True, slots=True)
+class Heard:
+    """A ring, counted from `first` (sample of the recording), and where in it the contact has ended."""
+
+    ring: Ring
+    first: int
+    contact: int
+    noise_rms: float
+
+
+def heard(samples: FloatArray, rate: float, span: StrikeSpan, quantum: float) -> Heard:
+    """The ring after `span`'s last contact and last clipped sample, less the offset of the quiet, with the noise it stands in.
+
+    A second contact excites the same modes again: what follows it is as good a ring, of the modes' f and Q. The same holds after
+    clipping, which is no part of the thing.
+    """
+    first, contact = span.onset, span.contact_end - span.onset
+    if span.second_contact is not None and span.end - span.second_contact > 0.02 * rate:
+        first = span.second_contact
+    if span.clipped:
+        last = _last_clipped(samples[first : span.end])
+        if first + last + 0.02 * rate < span.end:
+            first, contact = first + last, min(contact, max(int(0.0005 * rate), 1))
+    piece = _unstuck(samples[first : span.end], rate)
+    quiet = samples[span.quiet_from : span.quiet_to]
+    noise, offset, rms = _noise(quiet, piece, rate, quantum)
+    return Heard(Ring(piece - offset, rate, noise, LOWEST_HZ, HIGHEST_OF_RATE * rate), first, contact, rms)
+
+
+def step_of(samples: FloatArray, bits: int | None = None) -> float:
+    """Step of the samples' grid: of `bits` where known, else of the coarsest of 8, 16 and 24 bits that they lie on, else of a float32."""
+    peak = float(np.max(np.abs(samples), initial=0.0))
+    if bits is not None and 4 <= bits <= 32:
+        return 2.0 ** (1 - bits)
+    some = samples[:: max(len(samples) // 4096, 1)]
+    for depth in (8, 16, 24):
+        scaled = some * 2.0 ** (depth - 1)
+        if peak > 2.0 ** (4 - depth) and np.all(scaled == np.round(scaled)):
+            return 2.0 ** (1 - depth)
+    return _FLOAT_STEP * peak
+
+
+def _last_clipped(piece: FloatArray) -> int:
+    """One past the last sample of the first second's flat tops."""
+    top = float(np.max(np.abs(piece)))
+    return int(np.flatnonzero(np.abs(piece) > 0.985 * top)[-1]) + 2
+
+
+def _unstuck(piece: FloatArray, rate: float) -> FloatArray:
+    """Without the samples at the end that no longer change."""
+    moving = np.flatnonzero(np.diff(piece))
+    if not len(moving) or len(piece) - moving[-1] < _STUCK_S * rate:
+        return piece
+    return piece[: int(moving[-1]) + 1]
+
+
+def _noise(quiet: FloatArray, piece: FloatArray, rate: float, quantum: float) -> tuple[NoiseSpectrum, float, float]:
+    """Noise spectrum, offset and rms of the noise: of the quiet before, or where that is too short or gated, of the tail."""
+    if len(quiet) >= max(_QUIET_LEAST_S * rate, _QUIET_LEAST_FRAMES) and not _gated(quiet, quantum):
+        return noise_spectrum(quiet, rate, quantum=quantum), float(np.mean(quiet)), float(np.std(quiet))
+    tail = piece[-max(len(piece) // 4, min(_TAIL_LEAST_FRAMES, len(piece))) :]
+    offset = float(np.mean(tail))
+    if len(tail) < _TAIL_LEAST_FRAMES:
+        level = max(float(np.var(tail)), quantum**2 / 12.0, 1e-40)
+        return white_noise(level * 2.0 / rate, rate), offset, level**0.5
+    found = noise_spectrum(tail, rate, quantum=quantum)
+    # a line in the tail may be a mode that still rings: it takes no part in the floor, and is not called a tone
+    plain = replace(found, tones_hz=np.zeros(0), tone_amplitude=np.zeros(0))
+    return plain, offset, noise_power(plain, rate) ** 0.5
+
+
+def _gated(quiet: FloatArray, quantum: float) -> bool:
+    """Whether the quiet is digital silence for the most part: nothing is recorded so well."""
+    return float(np.count_nonzero(np.diff(quiet))) < 0.1 * len(quiet) or float(np.std(quiet)) < 0.2 * quantum
+
+
+def noise_power(noise: NoiseSpectrum, rate: float) -> float:
+    """Mean square of noise with this spectrum."""
+    grid = np.linspace(1.0, rate / 2.0, 2048)
+    return float(np.mean(noise.at(grid))) * rate / 2.0
+
+
+def growth_db(ring: Ring) -> float:
+    """How much louder than at first it grows: the largest power of 8 ms within 0.4 s over that of the first 12 ms."""
+    width = max(int(_WINDOW_S * ring.rate), 2)
+    part = ring.samples[: int(0.4 * ring.rate)]
+    if len(part) < 3 * width:
+        return 0.0
+    sums = np.concatenate([[0.0], np.cumsum(part**2)])
+    at = np.arange(0, len(part) - width, width // 2)
+    power = (sums[at + width] - sums[at]) / width
+    least = noise_power(ring.noise, ring.rate) + 1e-300
+    return float(10.0 * np.log10((power.max() + least) / (power[:2].max() + least)))
+
+
+def unexplained(ring: Ring, poles: Poles, contact: int) -> float:
+    """Share of the energy of the first 0.3 s after the contact that these modes leave, the noise's own taken off; 0 where all is noise."""
+    stop = min(int(_HEARD_S * ring.rate), len(ring.samples))
+    start = min(contact, stop // 2)
+    noise = noise_power(ring.noise, ring.rate) * (stop - start)
+    total = float(np.sum(ring.samples[start:stop] ** 2)) - noise
+    if total <= 0.2 * noise:
+        return 0.0
+    return max(float(np.sum(rest_of(ring, poles)[start:stop] ** 2)) - noise, 0.0) / total
+
+
+def is_driven(ring: Ring, poles: Poles, contact: int) -> bool:
+    """Whether the sound is kept going by something, as speech is, rather than rings: it grows after its onset, and modes do not explain it.
+
+    A struck thing may grow, too (beats, a low mode that starts near zero), but then its modes account for it.
+    """
+    return growth_db(ring) > GROWS_DB and unexplained(ring, poles, contact) > UNEXPLAINED
