@@ -74,8 +74,8 @@ def test_peak_filter(frequency_hz: float, q: float) -> None:
 def test_rlc_step_response(across: str) -> None:
     """Series RLC of 10 mH, 100 nF, 5 ohm after a voltage step (scipy.signal, lti): Q 63.24555, T60 27.63102 ms, width 79.57747 Hz.
 
-    f0 = 1/(2 pi sqrt(LC)) = 5032.921 Hz, Q = sqrt(L/C)/R, a = R/2L, half-power width R/(2 pi L): textbook. The capacitor's voltage stays at the step's
-    height after the ring, the resistor's returns to zero.
+    Textbook: f0 = 1/(2 pi sqrt(LC)) = 5032.921 Hz, Q = sqrt(L/C)/R, a = R/2L, half-power width R/(2 pi L). The capacitor's voltage
+    stays at the step's height after the ring, the resistor's returns to zero.
     """
     from scipy.signal import step
 
