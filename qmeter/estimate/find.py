@@ -79,6 +79,7 @@ def find_modes(ring: Ring, *, rounds: int = 3) -> Poles:
         for _ in range(rounds if hann else 1):
             spectrum = spectrum_of(rest, length)
             new = _look(ring, hann_bins(spectrum) if hann else spectrum, length, longest=level == 0, hann=hann)
+            new = new.take(np.abs(new.amplitude) < 1.5 * np.max(np.abs(rest[:length])))
             if not len(new):
                 break
             found = found.plus(new)

@@ -23,6 +23,8 @@ LONG = 9.0
 """time constants of the slowest mode that a fit covers: less than 1 % of the information lies beyond 4"""
 HALF_BAND_WIDTHS = 8.0
 GROUP_MOST = 6
+LEASH_DECAYS, LEASH_WIDTHS = 2.5, 1.0
+"""a fit that changes a decay rate by this factor, or moves a line by this many half-power widths, follows something else than its line"""
 BIN_SIZES = (24, 32, 48, 64, 96, 128, 192, 256, 384, 512, 768)
 
 
@@ -64,6 +66,7 @@ class Batch:
     members: IntArray
     start: IntArray
     rows: BinRows
+    pole: ComplexArray
 
 
 class Looks:
@@ -98,36 +101,44 @@ def _halvings(frames: int) -> list[int]:
     return lengths
 
 
-def batches(ring: Ring, poles: Poles, groups: list[IntArray], starts: IntArray, looks: Looks, *, long: float = LONG) -> list[Batch]:
-    """The rows that fit `groups`: what is left of the ring around each, with the group's own modes put back."""
-    shapes: dict[tuple[int, int], list[tuple[IntArray, int, int, int]]] = {}
-    for group in groups:
+def batches(
+    ring: Ring, poles: Poles, groups: list[IntArray], starts: IntArray, looks: Looks, still: float, changed: tuple[Poles, list[IntArray]] | None = None
+) -> list[Batch]:
+    """The rows that fit `groups`: what is left of the ring around each, with the group's own modes put back.
+
+    `changed` holds poles that have moved since the looks were taken, and for each group the modes beside it that did: the rest
+    is corrected for them, bin by bin.
+    """
+    shapes: dict[tuple[int, int], list[tuple[IntArray, int, int, int, int]]] = {}
+    for number, group in enumerate(groups):
         s = poles.pole[group]
-        start = int(starts[group].max())
-        length = looks.length_for(_span_of(-s.real, long), start)
+        start = int(starts[group].min())
+        length = looks.length_for(_span_of(-s.real, LONG, still), start)
         first, bins = _bins_for(s, length)
-        shapes.setdefault((len(group), bins), []).append((group, start, length, first))
+        shapes.setdefault((len(group), bins), []).append((group, start, length, first, number))
     out = []
     for (_, bins), items in shapes.items():
         members = np.array([i[0] for i in items])
-        start = np.array([i[1] for i in items])
-        length = np.array([i[2] for i in items])
-        first = np.array([i[3] for i in items])
+        start, length, first = (np.array([i[j] for i in items]) for j in (1, 2, 3))
         data = np.empty((len(items), bins), complex)
-        for r, (_, t0, n, k0) in enumerate(items):
+        for r, (_, t0, n, k0, number) in enumerate(items):
             data[r] = bins_around(looks.spectrum(t0, n), np.array([k0]), bins)[0]
+            if changed is not None and len(changed[1][number]):
+                beside, place = changed[1][number][None, :], (np.array([t0]), np.array([k0]), np.array([n]))
+                data[r] += own_bins(poles, beside, *place, bins)[0] - own_bins(changed[0], beside, *place, bins)[0]
         data += own_bins(poles, members, start, first, length, bins)
         centre = (first[:, None] + np.arange(bins)) * (ring.rate / length[:, None])
         weight = 2.0 / (ring.noise.at(np.abs(centre)) * (length * ring.rate)[:, None])
-        out.append(Batch(members, start, BinRows(data, weight, first, length)))
+        out.append(Batch(members, start, BinRows(data, weight, first, length), poles.pole[members]))
     return out
 
 
-def _span_of(decay: FloatArray, long: float) -> float:
-    """Samples to fit: `long` time constants of the slowest; beside a steady tone four times those of the slowest that decays faster."""
-    slow = float(decay.min())
-    faster = decay[decay > JOINT_DECAYS * slow]
-    return min(long / slow, 4 * long / float(faster.min())) if len(faster) else long / slow
+def _span_of(decay: FloatArray, long: float, still: float) -> float:
+    """Samples to fit: `long` time constants of the slowest; beside a steady tone four times those of the slowest that decays."""
+    ringing = decay[decay > still]
+    if len(ringing) == len(decay) or not len(ringing):
+        return float(long / decay.min())
+    return float(4 * long / ringing.min())
 
 
 def own_bins(poles: Poles, members: IntArray, start: IntArray, first: IntArray, length: IntArray, bins: int) -> ComplexArray:
@@ -164,23 +175,37 @@ class GroupFit:
         return np.full(len(self.fit.chi2), max(self.batch.rows.data.shape[1] - 2.0 * self.batch.members.shape[1], 1.0))
 
 
-def fit_groups(ring: Ring, poles: Poles, groups: list[IntArray], starts: IntArray, looks: Looks, *, steps: int, long: float = LONG) -> list[GroupFit]:
-    """Fit every group from where its poles stand."""
-    out = []
-    for batch in batches(ring, poles, groups, starts, looks, long=long):
-        fit = fit_rows(batch.rows, poles.pole[batch.members], steps=steps if batch.members.shape[1] == 1 else 2 * steps)
-        out.append(GroupFit(batch, fit))
-    return out
+def fit_groups(
+    ring: Ring, poles: Poles, groups: list[IntArray], starts: IntArray, looks: Looks, still: float, *, steps: int, loudest: float = np.inf
+) -> list[GroupFit]:
+    """Fit every group from where its poles stand, every second group along the frequency axis first.
+
+    Neighbours never move at the same time (red-black Gauss-Seidel): each of the second half is fitted against what the first half
+    has become. All at once they would correct the same misfit twice, and in a crowd run away.
+    """
+    order = sorted(range(len(groups)), key=lambda g: float(poles.pole[groups[g]].imag.mean()))
+    red = [groups[g] for g in order[0::2]]
+    black = [groups[g] for g in order[1::2]]
+    fits = _fit_batches(batches(ring, poles, red, starts, looks, still), steps)
+    if black:
+        now = successors(poles, fits, loudest, still)[0]
+        beside = [np.concatenate([red[i], red[i + 1]]) if i + 1 < len(red) else red[i] for i in range(len(black))]
+        fits += _fit_batches(batches(ring, poles, black, starts, looks, still, (now, beside)), steps)
+    return fits
 
 
-def moved(poles: Poles, fits: list[GroupFit], loudest: float, steady_decay: float) -> tuple[Poles, np.ndarray]:
-    """The poles after these fits, without those whose fit says nothing.
+def _fit_batches(items: list[Batch], steps: int) -> list[GroupFit]:
+    return [GroupFit(b, fit_rows(b.rows, b.pole, steps=steps if b.members.shape[1] == 1 else 2 * steps)) for b in items]
 
-    Dropped at once, before they are subtracted and spoil their neighbours' bins: decay rates that the fit itself cannot tell from
-    zero within a factor of two, amplitudes several times the loudest sample, lines that ran far from where they were seen.
+
+def successors(poles: Poles, fits: list[GroupFit], loudest: float, steady_decay: float) -> tuple[Poles, np.ndarray, np.ndarray]:
+    """The poles after these fits (all of them, in their places), which of them have a fit that says something, and which were fitted.
+
+    A fit says nothing when the decay rate is not told from zero within a factor of two, the amplitude is several times the loudest
+    sample, or the line ran far from where it was seen.
     """
     s, c = poles.pole.copy(), poles.amplitude.copy()
-    keep = np.zeros(len(poles), bool)
+    good_all, fitted = np.zeros(len(poles), bool), np.zeros(len(poles), bool)
     for g in fits:
         m = g.batch.members
         new = g.fit.pole
@@ -188,12 +213,22 @@ def moved(poles: Poles, fits: list[GroupFit], loudest: float, steady_decay: floa
             amplitude = g.fit.amplitude * np.exp(-new * g.batch.start[:, None])
             decay = -new.real
             u = np.sqrt(np.diagonal(g.fit.covariance, axis1=1, axis2=2)[:, 0::2])
-            ran = np.abs(new.imag - poles.pole[m].imag) > 4.0 * np.maximum(decay, -poles.pole[m].real) + 12.0 / g.batch.rows.length[:, None]
+            was = -poles.pole[m].real
+            ran = np.abs(new.imag - poles.pole[m].imag) > LEASH_WIDTHS * 2.0 * np.maximum(decay, was) + 6.0 / g.batch.rows.length[:, None]
+            ran |= (np.abs(np.log(decay / was)) > np.log(LEASH_DECAYS)) & (decay > steady_decay)
             told = (u < 0.5 * decay) | (decay < steady_decay)
             good = told & ~ran & (np.abs(amplitude) < 3.0 * loudest) & np.isfinite(amplitude) & (decay > 0)
         s[m[good]], c[m[good]] = new[good], amplitude[good]
-        keep[m[good]] = True
-    return Poles(s[keep], c[keep]), keep
+        c[m[~good]] = 0.0
+        good_all[m[good]] = True
+        fitted[m] = True
+    return Poles(s, c), good_all, fitted
+
+
+def moved(poles: Poles, fits: list[GroupFit], loudest: float, steady_decay: float) -> tuple[Poles, np.ndarray]:
+    """The poles after these fits without those whose fit says nothing: dropped before they are subtracted and spoil their neighbours."""
+    after, good, _ = successors(poles, fits, loudest, steady_decay)
+    return after.take(good), good
 
 
 def rest_of(ring: Ring, poles: Poles) -> FloatArray:

@@ -20,9 +20,9 @@ _BAND_LEAST_HZ = 600.0
 _COARSE = 0.12
 """a band's sample longer than this many time constants cannot tell where in a mode's life the residual stands"""
 _BROAD_S = 0.5
-_CLEAR_WIDTHS = 3.0
+_CLEAR_WIDTHS = 1.5
 """half-power widths either side of a mode that its own misfit may fill"""
-_CLEAR_SHARE = 0.4
+_CLEAR_SHARE = 0.2
 """share of a band's bins that must be left for the others to speak for it"""
 
 
@@ -54,6 +54,8 @@ class Profiles:
 
     def near(self, frequency_hz: float, decay_rate_per_s: float) -> BandProfile:
         """The band whose centre is nearest; the broad one where a mode is over within a few of the band's own samples."""
+        if not self.bands:
+            return self.broad
         band = min(self.bands, key=lambda b: abs(np.log(b.centre_hz / max(frequency_hz, 1.0))))
         return self.broad if band.step_s * decay_rate_per_s > _COARSE else band
 
@@ -75,7 +77,7 @@ def profiles(ring: Ring, rest: FloatArray, poles: Poles) -> Profiles:
     while centre < ring.rate / 2:
         half = max(_BAND_RATIO * centre, _BAND_LEAST_HZ / 2)
         lo, hi = int(max(centre - half, ring.low_hz) / step), int(min(centre + half, 0.48 * ring.rate) / step)
-        if hi - lo < 16:
+        if hi - lo < 4 or (bands and hi - lo < 16):
             break
         bands.append(_band(spectrum, root, clear, lo, hi, n / ring.rate, centre))
         centre = centre + half if half <= _BAND_LEAST_HZ / 2 else centre * 2**0.5
@@ -130,7 +132,7 @@ def best_start(band: BandProfile, decay_rate_per_s: float, starts_s: FloatArray,
     tail_p = np.append(np.cumsum((weight * p)[::-1])[::-1], 0.0)
     tail = np.append(np.cumsum(weight[::-1])[::-1], 0.0)
     at = np.clip(np.searchsorted(edges, starts_s - 1e-9), 0, len(edges) - 2)
-    variance = tail_p[at] / np.maximum(tail[at], 1e-300) ** 2 * tail[0]
+    variance = tail_p[at] / np.maximum(tail[at], 1e-30 * tail[0] + 1e-300) ** 2 * tail[0]
     return int(np.argmin(variance)), np.asarray(variance)
 
 

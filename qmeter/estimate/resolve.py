@@ -17,6 +17,12 @@ from qmeter.estimate.groups import GroupFit
 from qmeter.estimate.poles import BinRows, ComplexArray, FloatArray, RowFit, fit_rows
 
 ORDERS = (1, 2, 3, 4, 5, 6)
+_MOST_MEMBERS = 3
+"""a larger group is a crowd, not an unresolved pair: its misfit is mostly that of its neighbours"""
+REACH = 6.0
+"""a companion stands within about three half-power widths; what is further away was found on its own or is a leftover"""
+WIDER = 3.0
+"""and decays at most this much faster than the line it stands beside"""
 _EDGE = 0.25
 _SKIP = 3
 
@@ -89,34 +95,56 @@ def proposals(suspect: Suspect) -> dict[int, ComplexArray]:
     return out
 
 
-def resolve(poles: Poles, fits: list[GroupFit], least_excess: float) -> list[tuple[np.ndarray, Poles]]:
-    """For each suspect row whose evidence asks for other poles: (members to replace, the new poles with amplitudes at the ring's start)."""
-    pairs = suspects_of(fits, least_excess)
+def resolve(poles: Poles, fits: list[GroupFit], least_excess: float, loudest: float) -> list[tuple[np.ndarray, Poles]]:
+    """Rows whose evidence asks for other poles: (members to replace, the new poles with amplitudes at the ring's start).
+
+    Of rows whose bands overlap only the one with the most to gain is replaced: its neighbours' misfit is partly its own.
+    """
+    pairs = [(g, r) for g, r in suspects_of(fits, least_excess) if g.batch.members.shape[1] <= _MOST_MEMBERS]
     suspects = [
         Suspect(g.batch.rows.data[r], g.batch.rows.weight[r], int(g.batch.rows.first_bin[r]), int(g.batch.rows.length[r]), g.fit.pole[r], float(g.fit.chi2[r]))
         for g, r in pairs
     ]
     tried = _fit_all(suspects)
-    out = []
+    ranked = []
     for (g, r), suspect, fits_of in zip(pairs, suspects, tried, strict=True):
         chosen = _by_evidence(suspect, fits_of)
         if chosen is not None:
-            fit, row = chosen
+            ranked.append((chosen[2], g, r, chosen[0], chosen[1]))
+    out: list[tuple[np.ndarray, Poles]] = []
+    taken: list[tuple[float, float]] = []
+    for _, g, r, fit, row in sorted(ranked, key=lambda item: -item[0]):
+        low = float(g.batch.rows.first_bin[r] / g.batch.rows.length[r])
+        high = low + g.batch.rows.data.shape[1] / float(g.batch.rows.length[r])
+        centre = float(np.mean(g.fit.pole[r].imag)) / (2 * np.pi)
+        if not any(a < centre < b or low < 0.5 * (a + b) < high for a, b in taken):
             start = int(g.batch.start[r])
             members = g.batch.members[r]
-            new = Poles(fit.pole[row].copy(), fit.amplitude[row] * np.exp(-fit.pole[row] * start))
-            new = new.take(_ours(new, poles, members))
-            if len(new):
+            with np.errstate(all="ignore"):
+                new = Poles(fit.pole[row].copy(), fit.amplitude[row] * np.exp(-fit.pole[row] * start))
+                new = new.take(_ours(new, poles, members) & (np.abs(new.amplitude) < 3.0 * loudest))
+            if len(new) and _keeps(new, poles.take(members), g.fit.pole[r]):
                 out.append((members, new))
+                taken.append((low, high))
     return out
+
+
+def _keeps(new: Poles, old: Poles, fitted: ComplexArray) -> bool:
+    """Every strong member of the group has a successor within a width: what is there may be split, not lost."""
+    energy = np.abs(old.amplitude) ** 2 / -old.pole.real
+    for s in fitted[energy > 0.1 * energy.max()]:
+        if np.min(np.abs(new.pole.imag - s.imag)) > 2.0 * -s.real:
+            return False
+    return True
 
 
 def _ours(new: Poles, poles: Poles, members: np.ndarray) -> np.ndarray:
     """Lines that belong to the group: nearer to one of its members than to any mode outside (a line there is the neighbour's leftover)."""
     apart = np.abs(new.pole.imag[:, None] - poles.pole.imag[None, :])
     nearest = np.argmin(apart, axis=1)
-    reach = 8.0 * np.maximum(-poles.pole.real[nearest], -new.pole.real)
-    return np.asarray(np.isin(nearest, members) & (apart[np.arange(len(new)), nearest] < reach))
+    width = -poles.pole.real[nearest]
+    near = apart[np.arange(len(new)), nearest] < REACH * np.minimum(width, -new.pole.real) + width
+    return np.asarray(np.isin(nearest, members) & near & (-new.pole.real < WIDER * width))
 
 
 def _fit_all(suspects: list[Suspect]) -> list[dict[int, tuple[RowFit, int]]]:
@@ -142,7 +170,7 @@ def _fit_all(suspects: list[Suspect]) -> list[dict[int, tuple[RowFit, int]]]:
     return tried
 
 
-def _by_evidence(suspect: Suspect, tried: dict[int, tuple[RowFit, int]]) -> tuple[RowFit, int] | None:
+def _by_evidence(suspect: Suspect, tried: dict[int, tuple[RowFit, int]]) -> tuple[RowFit, int, float] | None:
     """The order that the evidence asks for, or None where it is what there is already."""
     k = len(suspect.data)
     levels = [fit.chi2[row] / max(k - 2 * p, 1) for p, (fit, row) in tried.items()]
@@ -152,7 +180,7 @@ def _by_evidence(suspect: Suspect, tried: dict[int, tuple[RowFit, int]]) -> tupl
         return None
     now = suspect.chi2 / scale + len(suspect.pole) * (4 * np.log(k) + 25.0)
     best = min(cost, key=lambda p: cost[p])
-    return tried[best] if cost[best] < now - 1.0 else None
+    return (*tried[best], (now - cost[best]) / now) if cost[best] < now - 1.0 else None
 
 
 def _sound(fit: RowFit, row: int, suspect: Suspect) -> bool:

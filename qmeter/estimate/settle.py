@@ -7,12 +7,13 @@ fitted as one line). What does not stand out of its surroundings is dropped.
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 
 from qmeter.dsp.noise import FloatArray
-from qmeter.estimate.find import Poles, Ring
+from qmeter.estimate.crowd import Crowd, crowd_modes
+from qmeter.estimate.find import Poles, Ring, find_modes
 from qmeter.estimate.groups import Batch, GroupFit, Looks, fit_groups, joint_groups, moved, rest_of
 from qmeter.estimate.poles import IntArray, RowFit
 from qmeter.estimate.profile import Profiles, best_start, profiles, spread_in_time
@@ -26,7 +27,14 @@ SAME_WIDTHS = 0.15
 """two poles closer than this many half-power widths, with like decays, are one mode found twice"""
 STEADY = 0.15
 """time constants within the whole ring below which a line is as good as a steady tone"""
-SWEEPS = 4
+TURNS = 4
+"""times the residual is searched anew for modes"""
+CROWDED = 4.0
+"""chi2 over its expectation above which the misfit is other modes, not a knock that will be over: a late start would not help"""
+CROWD = 4
+"""so many modes above CROWDED make a crowd, to be fitted all together"""
+EARLY, LATE = 0.5, 2.5
+"""time constants that a start may come after the onset: while settling, and at the end"""
 SPLINTER_WIDTHS = 2.0
 SICK = 1.6
 """chi2 over its expectation above which a group is fitted from later starts too"""
@@ -40,7 +48,7 @@ class Settled:
 
     covariance: (M, 2, 2) of (alpha, omega) per sample, against the residual's spread in time and local level. fisher: the same for
     stationary noise of the measured spectrum. start: (M,) samples; length: (M,); excess: (M,) chi2 over its expectation.
-    group: (M,) number of the joint group.
+    group: (M,) number of the joint group. model: (M, 2, 2), what repeated fits from other starts and lengths disagree by.
     """
 
     poles: Poles
@@ -50,6 +58,7 @@ class Settled:
     length: IntArray
     excess: FloatArray
     group: IntArray
+    model: FloatArray
 
     def take(self, which: object) -> Settled:
         return Settled(
@@ -60,48 +69,124 @@ class Settled:
             self.length[which],
             self.excess[which],
             self.group[which],
+            self.model[which],
         )
+
+
+SHORTEST = 96
+"""samples of ring below which nothing is fitted"""
 
 
 def settle(ring: Ring, poles: Poles, contact: int) -> Settled:
     """Final values of the candidates `poles`; `contact` is the sample at which the contact force has ended."""
-    loudest = float(np.max(np.abs(ring.samples), initial=0.0))
-    still = STEADY / len(ring.samples)
-    poles = unshattered(poles)
+    if len(ring.samples) < SHORTEST or not len(poles):
+        return _nothing()
+    candidates = poles
+    state = _State.of(ring, _first_fit(ring, unshattered(poles), contact))
+    for turn in range(TURNS):
+        for _ in range(2):
+            state = _sweep(ring, state, contact, careful=turn > 0, resolving=True)[0]
+        if np.count_nonzero(state.excess > CROWDED) >= CROWD:
+            return _from_crowd(crowd_modes(ring, unshattered(candidates), contact), ring)
+        new = _looked_again(ring, state, weak=turn > 0) if turn < TURNS - 1 else Poles.none()
+        if not len(new):
+            break
+        state = _State.of(ring, state.poles.plus(new))
+    for _ in range(2):
+        state, settled = _sweep(ring, state, contact, careful=True, resolving=False)
+        if not len(state.poles):
+            return _nothing()
+    return settled.take(worthy(settled, ring) & ~steady(settled.poles, ring))
+
+
+def _from_crowd(crowd: Crowd, ring: Ring) -> Settled:
+    """The modes of a crowd that held still, in the form of the others."""
+    m = len(crowd.poles)
+    whole = np.arange(m)
+    fit, model = crowd.fit, crowd.model
+    excess = np.full(m, np.inf)
+    settled = Settled(crowd.poles, fit, fit, np.full(m, crowd.start), np.full(m, crowd.length), excess, whole, model)
+    with np.errstate(all="ignore"):
+        relative = np.sqrt(fit[:, 0, 0] + model[:, 0, 0]) / -crowd.poles.pole.real
+    keep = (crowd.held >= 0.6) & (relative < 0.4) & ~steady(crowd.poles, ring)
+    hz = crowd.poles.pole.imag * ring.rate / (2 * np.pi)
+    return settled.take(keep & (hz > ring.low_hz) & (hz < ring.high_hz))
+
+
+@dataclass(frozen=True, slots=True)
+class _State:
+    """Poles, what they leave of the ring, and how that is spread over time."""
+
+    poles: Poles
+    rest: FloatArray
+    table: Profiles
+    excess: FloatArray
+
+    @staticmethod
+    def of(ring: Ring, poles: Poles, excess: FloatArray | None = None) -> _State:
+        rest = rest_of(ring, poles)
+        return _State(poles, rest, profiles(ring, rest, poles), np.full(len(poles), np.inf) if excess is None else excess)
+
+
+def _limits(ring: Ring) -> tuple[float, float]:
+    """Loudest sample, and the decay rate (per sample) below which a line is as good as steady."""
+    return float(np.max(np.abs(ring.samples), initial=0.0)), STEADY / len(ring.samples)
+
+
+def _first_fit(ring: Ring, poles: Poles, contact: int) -> Poles:
+    """Two rounds at a common early start: rough candidates subtract each other badly."""
+    loudest, still = _limits(ring)
     for _ in range(2):
         poles = merged(poles)
-        fits = fit_groups(ring, poles, joint_groups(poles, still), first_starts(poles, contact), Looks(ring, rest_of(ring, poles)), steps=6)
+        starts = first_starts(poles, contact, len(ring.samples))
+        fits = fit_groups(ring, poles, joint_groups(poles, still), starts, Looks(ring, rest_of(ring, poles)), still, steps=6, loudest=loudest)
         poles, _ = moved(poles, fits, loudest, still)
-    rest = rest_of(ring, poles)
-    table = profiles(ring, rest, poles)
-    settled = _nothing()
-    for sweep in range(SWEEPS):
-        if not len(poles):
-            return _nothing()
-        shift = onset_shift(ring, poles, rest, contact)
-        starts = choose_starts(ring, poles, table, shift)
-        looks = Looks(ring, rest)
-        fits = fit_groups(ring, poles, joint_groups(poles, still), starts, looks, steps=6)
-        if sweep >= 1:
-            fits = restarted(ring, poles, fits, looks, still)
-        before = poles
-        poles, keep = moved(poles, fits, loudest, still)
-        rest = rest_of(ring, poles)
-        table = profiles(ring, rest, poles)
-        settled = collect(ring, before, poles, keep, fits, table)
-        if sweep == SWEEPS - 1:
-            break
-        swaps = resolve(before, fits, 1.5) if sweep < SWEEPS - 2 else []
-        stays = keep.copy()
-        stays[keep] = worthy(settled, ring, local=True)
-        full = Poles(before.pole.copy(), before.amplitude.copy())
-        full.pole[keep], full.amplitude[keep] = poles.pole, poles.amplitude
-        better = merged(swapped(full, stays, swaps))
-        if swaps or len(better) < len(poles):
-            poles = better
-            rest = rest_of(ring, poles)
-            table = profiles(ring, rest, poles)
-    return settled.take(worthy(settled, ring) & ~steady(settled.poles, ring))
+    return poles
+
+
+def _sweep(ring: Ring, state: _State, contact: int, *, careful: bool, resolving: bool) -> tuple[_State, Settled]:
+    """Fit every group once at its best start; drop what is not worthy, replace groups whose bins ask for other poles."""
+    loudest, still = _limits(ring)
+    before = state.poles
+    if not len(before):
+        return state, _nothing()
+    latest = np.full(len(before), EARLY) if resolving else np.where(state.excess < CROWDED, LATE, EARLY)
+    starts = choose_starts(ring, before, state.table, onset_shift(ring, before, state.rest, contact), latest)
+    looks = Looks(ring, state.rest)
+    fits = fit_groups(ring, before, joint_groups(before, still), starts, looks, still, steps=6, loudest=loudest)
+    if careful:
+        fits = restarted(ring, before, fits, looks, still)
+    poles, keep = moved(before, fits, loudest, still)
+    after = _State.of(ring, poles)
+    settled = collect(ring, before, poles, keep, fits, after.table)
+    after = replace(after, excess=settled.excess)
+    if not resolving:
+        return after, settled
+    swaps = resolve(before, fits, 1.5, loudest)
+    stays = keep.copy()
+    stays[keep] = worthy(settled, ring, local=True)
+    full = Poles(before.pole.copy(), before.amplitude.copy())
+    full.pole[keep], full.amplitude[keep] = poles.pole, poles.amplitude
+    if swaps:
+        trial = _State.of(ring, merged(swapped(full, stays, swaps)))
+        late = int(np.median(starts))
+        if np.sum(trial.rest[late:] ** 2) < 1.02 * np.sum(after.rest[late:] ** 2):
+            return trial, settled
+    plain = merged(full.take(stays))
+    return (_State.of(ring, plain) if len(plain) < len(poles) else after), settled
+
+
+def _looked_again(ring: Ring, state: _State, *, weak: bool) -> Poles:
+    """Modes that show in the residual now that the others are well subtracted, but no splinters of these."""
+    new = find_modes(replace(ring, samples=state.rest), rounds=1)
+    poles = state.poles
+    energy = np.abs(poles.amplitude) ** 2 / -poles.pole.real
+    keep = np.ones(len(new), bool)
+    for i, s in enumerate(new.pole):
+        near = np.abs(s.imag - poles.pole.imag) < 1.0 * np.maximum(-poles.pole.real, -s.real)
+        mine = np.abs(new.amplitude[i]) ** 2 / -s.real
+        keep[i] = not np.any(near & (mine < 0.1 * energy))
+    return new.take(keep)
 
 
 def swapped(poles: Poles, keep: np.ndarray, swaps: list[tuple[np.ndarray, Poles]]) -> Poles:
@@ -142,9 +227,9 @@ def merged(poles: Poles) -> Poles:
     return poles.take(np.sort(np.array(kept, dtype=int)))
 
 
-def first_starts(poles: Poles, contact: int) -> IntArray:
+def first_starts(poles: Poles, contact: int, frames: int) -> IntArray:
     """Clear of the contact, but never so late that a fast mode is gone."""
-    return np.minimum(contact, np.floor(FIRST_START / np.maximum(-poles.pole.real, 1e-9))).astype(np.int64)
+    return np.minimum(min(contact, frames // 4), np.floor(FIRST_START / np.maximum(-poles.pole.real, 1e-9))).astype(np.int64)
 
 
 def onset_shift(ring: Ring, poles: Poles, rest: FloatArray, contact: int) -> int:
@@ -158,17 +243,17 @@ def onset_shift(ring: Ring, poles: Poles, rest: FloatArray, contact: int) -> int
     return int(np.argmin(cost)) if len(poles) else 0
 
 
-def choose_starts(ring: Ring, poles: Poles, table: Profiles, shift: int) -> IntArray:
+def choose_starts(ring: Ring, poles: Poles, table: Profiles, shift: int, latest: FloatArray) -> IntArray:
     """The start of the ladder with the least variance: as early as the residual lets it, but not before the change point."""
     out = np.zeros(len(poles), np.int64)
     ladder = STARTS_S + shift / ring.rate
     for m, s in enumerate(poles.pole):
         decay = -s.real * ring.rate
-        usable = ladder[STARTS_S * decay < 2.5]
+        usable = ladder[STARTS_S * decay < latest[m]]
         band = table.near(s.imag * ring.rate / (2 * np.pi), decay)
         best, _ = best_start(band, decay, usable, max(1e-4, band.step_s))
         out[m] = int(round(usable[best] * ring.rate))
-    return np.minimum(out, max(len(ring.samples) - 64, 0))
+    return np.minimum(out, len(ring.samples) // 2)
 
 
 def restarted(ring: Ring, poles: Poles, fits: list[GroupFit], looks: Looks, still: float) -> list[GroupFit]:
@@ -195,10 +280,10 @@ def restarted(ring: Ring, poles: Poles, fits: list[GroupFit], looks: Looks, stil
             fastest = float(np.max(-poles.pole[members].real)) * ring.rate
             if len(later) >= offset and (later[offset - 1] - start / ring.rate) * fastest < 1.5:
                 groups.append(members)
-                starts[members] = int(later[offset - 1] * ring.rate)
+                starts[members] = min(int(later[offset - 1] * ring.rate), len(ring.samples) // 2)
         if not groups:
             break
-        for g in fit_groups(ring, poles, groups, starts, looks, steps=6):
+        for g in fit_groups(ring, poles, groups, starts, looks, still, steps=6):
             for r in range(len(g.batch.members)):
                 key = tuple(g.batch.members[r])
                 value = _score(g, r)
@@ -220,7 +305,7 @@ def _one_row(g: GroupFit, r: int) -> GroupFit:
     pick = slice(r, r + 1)
     b, f = g.batch, g.fit
     return GroupFit(
-        Batch(b.members[pick], b.start[pick], b.rows.take(np.array([r]))),
+        Batch(b.members[pick], b.start[pick], b.rows.take(np.array([r])), b.pole[pick]),
         RowFit(f.pole[pick], f.amplitude[pick], f.covariance[pick], f.chi2[pick], f.residual[pick], f.influence[pick]),
     )
 
@@ -253,7 +338,7 @@ def collect(ring: Ring, before: Poles, after: Poles, keep: np.ndarray, fits: lis
                 covariance[i] = block * raise_by[2 * j : 2 * j + 2, None] * raise_by[None, 2 * j : 2 * j + 2]
                 start[i], length[i], excess[i], group[i] = g.batch.start[r], n, ratio, number
             number += 1
-    return Settled(poles, covariance, fisher, start, length, excess, group).take(keep)
+    return Settled(poles, covariance, fisher, start, length, excess, group, np.zeros((m, 2, 2))).take(keep)
 
 
 def _local_level(ring: Ring, g: GroupFit, r: int, ratio: float, hz: float) -> float:
@@ -295,4 +380,4 @@ def steady(poles: Poles, ring: Ring) -> np.ndarray:
 
 def _nothing() -> Settled:
     zero = np.zeros(0, int)
-    return Settled(Poles.none(), np.zeros((0, 2, 2)), np.zeros((0, 2, 2)), zero, zero, np.zeros(0), zero)
+    return Settled(Poles.none(), np.zeros((0, 2, 2)), np.zeros((0, 2, 2)), zero, zero, np.zeros(0), zero, np.zeros((0, 2, 2)))

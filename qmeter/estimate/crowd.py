@@ -1,0 +1,140 @@
+"""Rings that do not reach the noise: many modes over one another. Found and fitted all together, and judged by how still they hold.
+
+The fit is repeated over a fixed ladder of starts and lengths, never adapted to the answer. A mode's value is the weighted mean over
+the rungs in which such a pole ought to show; what the rungs disagree by is the model part of its uncertainty.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass, replace
+
+import numpy as np
+
+from qmeter.dsp.band import ring_sum
+from qmeter.estimate.find import Poles, Ring, find_modes
+from qmeter.estimate.joint import JointFit, joint_fit
+from qmeter.estimate.poles import FloatArray
+
+TURNS = 4
+LONGEST_S, SHORTEST_S = 1.5, 0.25
+LEAST_ENERGY = 30.0
+"""rho^2 = 4 a^2 / u(a)^2 of a mode against the residual around it"""
+RUNGS = ((0.0, 1.0), (0.002, 1.0), (0.005, 1.0), (0.010, 1.0), (0.020, 1.0), (0.040, 1.0), (0.0, 0.4), (0.005, 0.4), (0.015, 0.4))
+"""(start after the end of contact in s, share of the full length)"""
+HEAVIEST = 0.25
+"""share of the total weight that one rung may have"""
+
+
+@dataclass(frozen=True, slots=True)
+class Crowd:
+    """Modes with the two parts of their covariance, each (M, 2, 2) of (alpha, omega) per sample; `steady` (M,) share of rungs it held in."""
+
+    poles: Poles
+    fit: FloatArray
+    model: FloatArray
+    held: FloatArray
+    start: int
+    length: int
+
+
+def crowd_modes(ring: Ring, poles: Poles, contact: int) -> Crowd:
+    """All modes of a crowded ring, from the candidates `poles`."""
+    start = min(contact, len(ring.samples) // 4)
+    length = _length_for(ring, poles, start)
+    loudest = float(np.max(np.abs(ring.samples)))
+    fit = joint_fit(ring, poles, start, length, steps=8)
+    for turn in range(TURNS):
+        kept = fit.poles.take(_credible(fit, poles, loudest))
+        if turn == TURNS - 1 or not len(kept):
+            break
+        new = _new_modes(ring, kept)
+        poles = kept.plus(new)
+        fit = joint_fit(ring, poles, start, length, steps=8)
+    if not len(kept):
+        none = np.zeros((0, 2, 2))
+        return Crowd(Poles.none(), none, none, np.zeros(0), start, length)
+    return _ladder(ring, kept, start, length)
+
+
+def _length_for(ring: Ring, poles: Poles, start: int) -> int:
+    slow = float(np.quantile(-poles.pole.real, 0.1)) if len(poles) else 1.0
+    wanted = np.clip(6.0 / slow, SHORTEST_S * ring.rate, LONGEST_S * ring.rate)
+    return int(min(wanted, len(ring.samples) - start))
+
+
+def _credible(fit: JointFit, seed: Poles, loudest: float) -> np.ndarray:
+    """Determined against the residual, not run away from where it was seen, no giant."""
+    decay = -fit.poles.pole.real
+    with np.errstate(all="ignore"):
+        rho2 = 4 * decay**2 / fit.covariance[:, 0, 0]
+        ran = np.abs(np.log(decay / -seed.pole.real)) > np.log(2.7)
+        ran |= np.abs(fit.poles.pole.imag - seed.pole.imag) > 2.6 * -seed.pole.real
+    return np.asarray((rho2 > LEAST_ENERGY) & ~ran & (np.abs(fit.poles.amplitude) < 2.0 * loudest))
+
+
+def _new_modes(ring: Ring, poles: Poles) -> Poles:
+    """What shows in the residual, but no splinter of a mode that is there."""
+    rest = ring.samples - ring_sum(poles.pole, poles.amplitude, 0, len(ring.samples))
+    new = find_modes(replace(ring, samples=rest), rounds=1)
+    energy = np.abs(poles.amplitude) ** 2 / -poles.pole.real
+    keep = np.ones(len(new), bool)
+    for i, s in enumerate(new.pole):
+        near = np.abs(s.imag - poles.pole.imag) < 1.0 * np.maximum(-poles.pole.real, -s.real)
+        keep[i] = not np.any(near & (np.abs(new.amplitude[i]) ** 2 / -s.real < 0.1 * energy))
+    return new.take(keep)
+
+
+def _ladder(ring: Ring, poles: Poles, start: int, length: int) -> Crowd:
+    """The fixed ladder: every rung a joint fit from the same poles."""
+    m = len(poles)
+    runs = []
+    for delay_s, share in RUNGS:
+        t0 = start + int(delay_s * ring.rate)
+        n = int(share * length)
+        if t0 + n > len(ring.samples):
+            n = len(ring.samples) - t0
+        if n < 256:
+            continue
+        fit = joint_fit(ring, poles, t0, n, steps=4)
+        decay = -poles.pole.real
+        ought = (decay * (t0 - start) < 1.5) & (decay * n > 0.8)
+        ran = np.abs(np.log(-fit.poles.pole.real / decay)) > np.log(2.0)
+        ran |= np.abs(fit.poles.pole.imag - poles.pole.imag) > 2.0 * decay
+        told = 4 * fit.poles.pole.real**2 > 16.0 * fit.covariance[:, 0, 0]
+        runs.append((fit, ought, ought & ~ran & told & np.isfinite(fit.covariance[:, 0, 0])))
+    held = np.array([sum(r[2][i] for r in runs) / max(sum(r[1][i] for r in runs), 1) for i in range(m)])
+    pole, fit_part, model_part = poles.pole.copy(), np.full((m, 2, 2), np.inf), np.full((m, 2, 2), np.inf)
+    for i in range(m):
+        picked = [r[0] for r in runs if r[2][i]]
+        if len(picked) < 2:
+            continue
+        values = np.array([[-f.poles.pole[i].real, f.poles.pole[i].imag] for f in picked])
+        covariances = np.array([f.covariance[i] for f in picked])
+        mean, fit_part[i], model_part[i] = _summary(values, covariances)
+        pole[i] = -mean[0] + 1j * mean[1]
+    return Crowd(Poles(pole, poles.amplitude), fit_part, model_part, held, start, length)
+
+
+def _summary(values: FloatArray, covariances: FloatArray) -> tuple[FloatArray, FloatArray, FloatArray]:
+    """Weighted mean over rungs, the mean covariance of the three best determined, and the weighted scatter.
+
+    The rungs share their data: the scatter is not divided by their number.
+    """
+    variance = covariances[:, 0, 0]
+    weight = 1.0 / variance
+    weight = weight / weight.sum()
+    for _ in range(3):
+        weight = np.minimum(weight, HEAVIEST)
+        weight = weight / weight.sum()
+    mean = weight @ values
+    off = values - mean
+    spread = np.sqrt(np.maximum(np.median(off**2, axis=0), 1e-300)) * 1.4826
+    good = (np.abs(off) < 4.0 * spread + 3.0 * np.sqrt(covariances[:, [0, 1], [0, 1]])).all(axis=1)
+    if good.sum() >= 2:
+        weight = np.where(good, weight, 0.0)
+        weight /= weight.sum()
+        mean = weight @ values
+        off = values - mean
+    model = np.einsum("r,ri,rj->ij", weight, off, off)
+    best = np.argsort(variance)[:3]
+    return mean, covariances[best].mean(axis=0), model
