@@ -12,7 +12,7 @@ from qmeter.estimate import doubts
 from qmeter.estimate.find import Ring, find_modes
 from qmeter.estimate.groups import rest_of
 from qmeter.estimate.half_power import ModeRing
-from qmeter.estimate.hearing import Heard, growth_db, heard, is_driven, unexplained
+from qmeter.estimate.hearing import Heard, heard, is_driven, unexplained
 from qmeter.estimate.modes import DecayTrace, Doubt, Mode, Settings, Spread, Strike
 from qmeter.estimate.pool import clock_part
 from qmeter.estimate.routes import cross_checked, mode_rings
@@ -20,6 +20,8 @@ from qmeter.estimate.settle import SHORTEST, Settled, settle
 
 _DB_PER_NEPER = 8.685889638
 _TRACE_POINTS = 240
+_FALLEN_DB = 20.0
+"""a strike that has fallen by less when it is cut off is set aside where others are good"""
 _LOUD_DB = 10.0
 """a strike is cut off when one of its modes this near to the strongest is"""
 _SILENT = 1e-10
@@ -47,7 +49,7 @@ def read_strike(samples: FloatArray, rate: float, span: StrikeSpan, settings: Se
         modes, reason = _rung(what, span, settings)
         if not modes:
             said.append(reason or doubts.nothing_rang(_dbfs(span.peak), _dbfs(what.noise_rms)))
-        elif span.cut_by_end or span.cut_by_next or _short(modes, len(what.ring.samples) / rate):
+        elif span.cut_by_end or span.cut_by_next or _short(modes, what, span):
             cut.append(doubts.strike_cut_off(span, (span.end - span.onset) / rate, _end_over_noise_db(what)))
     strike = Strike(
         onset_s=span.onset / rate,
@@ -58,7 +60,7 @@ def read_strike(samples: FloatArray, rate: float, span: StrikeSpan, settings: Se
         doubts=(*said, *cut),
         modes=modes,
     )
-    spoiled = bool(modes) and (span.clipped or span.second_contact is not None or _short(modes, len(what.ring.samples) / rate))
+    spoiled = bool(modes) and (span.clipped or span.second_contact is not None or _short(modes, what, span))
     return Reading(strike, spoiled, what.ring.noise)
 
 
@@ -74,19 +76,21 @@ def _contact_doubts(span: StrikeSpan, rate: float) -> list[Doubt]:
 def _rung(what: Heard, span: StrikeSpan, settings: Settings) -> tuple[tuple[Mode, ...], Doubt | None]:
     """The modes of a ring, checked and doubted, or why there are none."""
     ring, contact = what.ring, what.contact
-    grows = growth_db(ring)
     try:
         # rows that run away in a fit overflow; what they come to is not finite, and is dropped
         with np.errstate(all="ignore"):
             found = find_modes(ring)
-            if len(found) and is_driven(ring, found, contact):
-                return (), doubts.driven(grows, unexplained(ring, found, contact))
+            # the rough fit says it of most speech, whose forest of harmonics would take long to settle
+            left = unexplained(ring, found, contact)
+            if len(found) and is_driven(what, 0.5 * left):
+                return (), doubts.driven(what.growth_db, left)
             settled = _finite(settle(ring, found, contact))
-            if len(settled.poles) and is_driven(ring, settled.poles, contact):
-                return (), doubts.driven(grows, unexplained(ring, settled.poles, contact))
+            left = unexplained(ring, settled.poles, contact)
+            if len(settled.poles) and is_driven(what, left):
+                return (), doubts.driven(what.growth_db, left)
             if not len(settled.poles):
                 return (), None
-            modes = _modes(ring, settled, settings)
+            modes = _modes(ring, settled, settings, settled.model)
             return _doubted(what, span, settled, modes), None
     except np.linalg.LinAlgError:
         return (), None
@@ -187,8 +191,14 @@ def _trace(mode: Mode, alone: ModeRing | None, s: Settled, i: int, what: Heard) 
     )
 
 
-def _short(modes: tuple[Mode, ...], seen_s: float) -> bool:
-    """Whether a loud mode of the strike is cut off before it has fallen far enough."""
+def _short(modes: tuple[Mode, ...], what: Heard, span: StrikeSpan) -> bool:
+    """Whether the strike, or a loud mode of it, is cut off before it has fallen far enough."""
+    samples = what.ring.samples
+    seen_s = len(samples) / what.ring.rate
+    twentieth = max(int(0.02 * what.ring.rate), 16)
+    head, end = (float(np.sqrt(np.mean(part**2))) for part in (samples[:twentieth], samples[-twentieth:]))
+    if (span.cut_by_end or span.cut_by_next) and _dbfs(head) - _dbfs(end) < _FALLEN_DB and end > 2.0 * what.noise_rms:
+        return True
     return any(
         mode.level_db > -_LOUD_DB
         and mode.amplitude_decay_rate_per_s * seen_s < doubts.TIME_CONSTANTS_WANTED
