@@ -23,8 +23,9 @@ _FLOAT_STEP = 2.0**-23
 _HEARD_S = 0.3
 """speech is judged over its first syllable"""
 _WINDOW_S = 0.008
-GROWS_DB = 1.0
-UNEXPLAINED = 0.5
+_GROWTH_S = 0.4
+DRIVEN = ((1.0, 0.5), (6.0, 0.05))
+"""a sound that grows by more than the first (dB) and of which modes leave more than the second (of its energy) is no ring"""
 
 
 @dataclass(frozen=True, slots=True)
@@ -35,6 +36,8 @@ class Heard:
     first: int
     contact: int
     noise_rms: float
+    growth_db: float
+    """from the onset on, whether or not the ring starts later"""
 
 
 def heard(samples: FloatArray, rate: float, span: StrikeSpan, quantum: float) -> Heard:
@@ -53,7 +56,8 @@ def heard(samples: FloatArray, rate: float, span: StrikeSpan, quantum: float) ->
     piece = _unstuck(samples[first : span.end], rate)
     quiet = samples[span.quiet_from : span.quiet_to]
     noise, offset, rms = _noise(quiet, piece, rate, quantum)
-    return Heard(Ring(piece - offset, rate, noise, LOWEST_HZ, HIGHEST_OF_RATE * rate), first, contact, rms)
+    grows = growth_db(samples[span.onset : span.end] - offset, rate, noise_power(noise, rate))
+    return Heard(Ring(piece - offset, rate, noise, LOWEST_HZ, HIGHEST_OF_RATE * rate), first, contact, rms, grows)
 
 
 def step_of(samples: FloatArray, bits: int | None = None) -> float:
@@ -109,16 +113,16 @@ def noise_power(noise: NoiseSpectrum, rate: float) -> float:
     return float(np.mean(noise.at(grid))) * rate / 2.0
 
 
-def growth_db(ring: Ring) -> float:
-    """How much louder than at first it grows: the largest power of 8 ms within 0.4 s over that of the first 12 ms."""
-    width = max(int(_WINDOW_S * ring.rate), 2)
-    part = ring.samples[: int(0.4 * ring.rate)]
+def growth_db(samples: FloatArray, rate: float, noise: float) -> float:
+    """How much louder than at first it grows: the largest power of 8 ms within 0.4 s over that of the first 12 ms; `noise`: mean square."""
+    width = max(int(_WINDOW_S * rate), 2)
+    part = samples[: int(_GROWTH_S * rate)]
     if len(part) < 3 * width:
         return 0.0
     sums = np.concatenate([[0.0], np.cumsum(part**2)])
     at = np.arange(0, len(part) - width, width // 2)
     power = (sums[at + width] - sums[at]) / width
-    least = noise_power(ring.noise, ring.rate) + 1e-300
+    least = noise + 1e-300
     return float(10.0 * np.log10((power.max() + least) / (power[:2].max() + least)))
 
 
@@ -133,9 +137,10 @@ def unexplained(ring: Ring, poles: Poles, contact: int) -> float:
     return max(float(np.sum(rest_of(ring, poles)[start:stop] ** 2)) - noise, 0.0) / total
 
 
-def is_driven(ring: Ring, poles: Poles, contact: int) -> bool:
+def is_driven(what: Heard, share: float) -> bool:
     """Whether the sound is kept going by something, as speech is, rather than rings: it grows after its onset, and modes do not explain it.
 
-    A struck thing may grow, too (beats, a low mode that starts near zero), but then its modes account for it.
+    `share`: what the modes leave unexplained. A struck thing may grow, too (beats, a low mode that starts near zero, a graze before
+    the tap), but then its modes account for it.
     """
-    return growth_db(ring) > GROWS_DB and unexplained(ring, poles, contact) > UNEXPLAINED
+    return any(what.growth_db > grows and share > left for grows, left in DRIVEN)
