@@ -19,7 +19,11 @@ TURNS = 4
 LONGEST_S, SHORTEST_S = 1.5, 0.25
 LEAST_ENERGY = 30.0
 """rho^2 = 4 a^2 / u(a)^2 of a mode against the residual around it"""
-RUNGS = ((0.0, 1.0), (0.002, 1.0), (0.005, 1.0), (0.010, 1.0), (0.020, 1.0), (0.040, 1.0), (0.0, 0.4), (0.005, 0.4), (0.015, 0.4))
+RUNGS = (
+    *((t, 1.0) for t in (0.0, 0.005, 0.012, 0.030, 0.070, 0.150)),
+    *((t, 0.4) for t in (0.0, 0.012, 0.040)),
+    *((t, 0.16) for t in (0.0, 0.005)),
+)
 """(start after the end of contact in s, share of the full length)"""
 HEAVIEST = 0.25
 """share of the total weight that one rung may have"""
@@ -87,7 +91,9 @@ def _new_modes(ring: Ring, poles: Poles) -> Poles:
 def _ladder(ring: Ring, poles: Poles, start: int, length: int) -> Crowd:
     """The fixed ladder: every rung a joint fit from the same poles."""
     m = len(poles)
-    runs = []
+    values: list[list[FloatArray]] = [[] for _ in range(m)]
+    covariances: list[list[FloatArray]] = [[] for _ in range(m)]
+    asked = np.zeros(m, int)
     for delay_s, share in RUNGS:
         t0 = start + int(delay_s * ring.rate)
         n = int(share * length)
@@ -95,22 +101,25 @@ def _ladder(ring: Ring, poles: Poles, start: int, length: int) -> Crowd:
             n = len(ring.samples) - t0
         if n < 256:
             continue
-        fit = joint_fit(ring, poles, t0, n, steps=4)
-        decay = -poles.pole.real
+        alive = np.flatnonzero(-poles.pole.real * (t0 - start) < 3.0)
+        fit = joint_fit(ring, poles.take(alive), t0, n, steps=4)
+        decay = -poles.pole.real[alive]
         ought = (decay * (t0 - start) < 1.5) & (decay * n > 0.8)
         ran = np.abs(np.log(-fit.poles.pole.real / decay)) > np.log(2.0)
-        ran |= np.abs(fit.poles.pole.imag - poles.pole.imag) > 2.0 * decay
+        ran |= np.abs(fit.poles.pole.imag - poles.pole.imag[alive]) > 2.0 * decay
         told = 4 * fit.poles.pole.real**2 > 16.0 * fit.covariance[:, 0, 0]
-        runs.append((fit, ought, ought & ~ran & told & np.isfinite(fit.covariance[:, 0, 0])))
-    held = np.array([sum(r[2][i] for r in runs) / max(sum(r[1][i] for r in runs), 1) for i in range(m)])
+        good = ought & ~ran & told & np.isfinite(fit.covariance[:, 0, 0])
+        for j, i in enumerate(alive):
+            asked[i] += ought[j]
+            if good[j]:
+                values[i].append(np.array([-fit.poles.pole[j].real, fit.poles.pole[j].imag]))
+                covariances[i].append(fit.covariance[j])
+    held = np.array([len(values[i]) / max(asked[i], 1) for i in range(m)])
     pole, fit_part, model_part = poles.pole.copy(), np.full((m, 2, 2), np.inf), np.full((m, 2, 2), np.inf)
     for i in range(m):
-        picked = [r[0] for r in runs if r[2][i]]
-        if len(picked) < 2:
+        if len(values[i]) < 2:
             continue
-        values = np.array([[-f.poles.pole[i].real, f.poles.pole[i].imag] for f in picked])
-        covariances = np.array([f.covariance[i] for f in picked])
-        mean, fit_part[i], model_part[i] = _summary(values, covariances)
+        mean, fit_part[i], model_part[i] = _summary(np.array(values[i]), np.array(covariances[i]))
         pole[i] = -mean[0] + 1j * mean[1]
     return Crowd(Poles(pole, poles.amplitude), fit_part, model_part, held, start, length)
 
