@@ -16,7 +16,7 @@ import numpy as np
 from qmeter import relations
 from qmeter.dsp.band import bins_around, ring_sum, spectrum_of
 from qmeter.dsp.noise import FloatArray, fast_length
-from qmeter.estimate.drift_line import Law, LineFit, envelope_of, fit_line, guess
+from qmeter.estimate.drift_line import Law, LineFit, envelope_of, fit_line, guess, rivals, score
 from qmeter.estimate.find import Poles, Ring
 from qmeter.estimate.modes import Doubt
 from qmeter.estimate.poles import BinRows, ComplexArray, bin_response, fit_rows
@@ -42,9 +42,15 @@ MORE = 6.0
 LATE = 0.25
 """time constants of a late start that call for a second look from the earliest"""
 MOST_UNSETTLED = 2
+HOPELESS = 8.0
+"""times the chi2 of the settled lines above which a fit in a crowd is given up after six steps"""
+LEAST_WORTH = 0.1
+"""relative standard uncertainty of the decay rate above which a drift says nothing"""
 AT_NOISE = 1.6
 """chi2 per bin up to which a fit counts as having reached the noise"""
 FAR_FROM_BENT = 1000.0
+LEAST_BENT = 0.5
+"""share of one line's misfit that a bend must explain to first order; drifting lines had 0.7 and more, real clutter mostly less"""
 BENT_LEAVES, BENT_SHARE = 0.05, 0.2
 """Close pairs leave more of one line's misfit than this, to first order in the bins and in the envelope, and lie further from a bend than
 `FAR_FROM_BENT` (squared misfit over noise); drifts that lines can mimic down to the noise have one of the three below (300 cases)"""
@@ -132,18 +138,21 @@ def find_drifts(
     asker = _Asker(ring, poles, len(settled.poles), left)
     taken: set[int] = set()
     out: list[Drift] = []
-    for i in strong:
+    for i in (int(j) for j in strong):
         if i in taken:
             continue
-        near = [j for j in crowd(poles, int(i)) if j not in taken]
-        late, early = int(start[i]), _early(poles, int(i), contact, len(ring.samples))
-        found = asker.ask([int(i), *near], late)
+        everyone = crowd(poles, i)
+        members = [i, *(j for j in everyone if j not in taken)]
+        late, early = int(start[i]), _early(poles, i, contact, len(ring.samples))
         # a line that misses the noise is started late by `settle`, past most of its bend
-        if found is None and -poles.pole[i].real * (late - early) > LATE:
-            found = asker.ask([int(i), *near], early, wary=True)
-        if found is not None:
-            taken |= _passed(poles, int(i), found, ring.rate)
-            out.append(replace(found, replaces=(*sorted(j for j in _passed(poles, int(i), found, ring.rate) if j < len(settled.poles)),)))
+        found = asker.ask(members, early, wary=True) if -poles.pole[i].real * (late - early) > LATE else None
+        found = found or asker.ask(members, late, wary=i >= len(settled.poles))
+        if found is None or math.sqrt(found.covariance[1, 1]) > LEAST_WORTH * found.decay_rate_per_s:
+            continue
+        passed = _passed(poles, i, found, ring.rate)
+        if not passed & taken:
+            taken |= passed | {j for j in everyone if j >= len(settled.poles)}
+            out.append(replace(found, replaces=tuple(sorted(j for j in passed if j < len(settled.poles)))))
     return tuple(out)
 
 
@@ -190,7 +199,8 @@ class _Asker:
     def ask(self, members: list[int], start: int, *, wary: bool = False) -> Drift | None:
         """The drift, if one line that drifts is what the bins around the members ask for; the first of them sets width and length.
 
-        `wary`: the start is one that `settle` avoided, so only a fit that reaches the noise counts, with three times the evidence.
+        `wary`: the start is one that `settle` avoided, or the line one that it dropped: only a fit that reaches the noise counts, and
+        with three times the evidence.
         """
         row, without = self.rows(members, start)
         bins = row.data.shape[1]
@@ -202,21 +212,24 @@ class _Asker:
         settled_chi2 = float(np.sum(without.weight * np.abs(without.data) ** 2))
         behind = float(self._ring.noise.bins_at(line.imag * self._ring.rate / (2 * np.pi)))
         level = _level(min(settled_chi2, one_chi2), bins - 2.0 * len(members), behind)
-        gain = score(row, line)
-        if not near and gain < 0.7 * EVIDENCE * level:
+        bend = score(row, line)
+        if not near and bend < 0.7 * EVIDENCE * level:
             return None
-        fits = _fitted(row, line, settled_chi2, alone=not near, left=1.0 - gain / one_chi2)
+        fits = _fits(row, line, one_chi2, settled_chi2, bend, alone=not near)
         if not fits:
             return None
         best = min(fits, key=lambda f: f.chi2)
         level = _level(min(settled_chi2, best.chi2), bins - 3.0, behind)
         gain = (one_chi2 - best.chi2) / level
-        if gain < EVIDENCE or (near and best.chi2 > max(1.25 * settled_chi2, settled_chi2 + MORE * level)):
+        if gain < EVIDENCE or (level > AT_NOISE and best.chi2 > 0.5 * one_chi2):
+            return None
+        if near and best.chi2 > max(1.25 * settled_chi2, settled_chi2 + MORE * level):
             return None
         if wary and (gain < 3 * EVIDENCE or level > AT_NOISE):
             return None
         two, three = rivals(row, pole, self._poles.amplitude[members], line)
-        if best.chi2 > two + MORE * level or best.chi2 > max(1.25 * three, three + 2 * MORE * level):
+        more = MORE * level if level < AT_NOISE else 0.0
+        if best.chi2 > two + more or best.chi2 > max(1.25 * three, three + 2 * more):
             return None
         return _drift(self._ring, row, start, fits, level, gain)
 
@@ -259,79 +272,30 @@ def _level(chi2: float, freedom: float, behind: float) -> float:
     return max(ratio if ratio > 1.6 else (behind + max(freedom, 1.0) * ratio) / (behind + max(freedom, 1.0)), 1.0)
 
 
-def score(row: BinRows, pole: complex) -> float:
-    """Gain of log likelihood that a bend would bring to first order, over the straight line `pole` that fits best."""
-    poles = np.array([[pole, pole + pole.real, pole + 2 * pole.real]])
-    d, g, d_mirror, g_mirror = (x[0] for x in bin_response(poles, row.first_bin, row.length, row.data.shape[1], hann=False))
-    root = np.sqrt(row.weight[0])
+def _fits(row: BinRows, one: complex, one_chi2: float, settled_chi2: float, bend: float, *, alone: bool) -> list[LineFit]:
+    """The laws of either power from the envelope's guess, a lone line's also from the straight fit; none where it is no bend.
 
-    def columns(own: ComplexArray, mirror: ComplexArray) -> FloatArray:
-        pair = 0.5 * root * np.stack([own + mirror, 1j * (own - mirror)])
-        return np.asarray(np.concatenate([pair.real, pair.imag], axis=1).T)
-
-    white = row.data[0] * root
-    y = np.concatenate([white.real, white.imag])
-    straight = np.linalg.qr(np.concatenate([columns(d[0], d_mirror[0]), columns(g[0], g_mirror[0])], axis=1))[0]
-    y = y - straight @ (straight.T @ y)
-    gains = []
-    for p in (1, 2):
-        bend = columns(d[p], d_mirror[p])
-        bend = np.linalg.qr(bend - straight @ (straight.T @ bend))[0]
-        gains.append(float(np.sum((bend.T @ y) ** 2)))
-    return max(gains)
-
-
-def _fitted(row: BinRows, one: complex, settled_chi2: float, *, alone: bool, left: float) -> list[LineFit]:
-    """The laws of either power from the envelope's guess; a lone line also from the straight fit.
-
-    Where the settled lines reach the noise, the envelope is far from any bend, and most of one line's misfit is `left` by a bend to
-    first order, they are what they seem, and nothing is fitted.
+    `bend` is the gain of the score test. What a bend does not explain to first order, neither in the bins nor in the envelope, is
+    clutter. Where the settled lines reach the noise and the envelope is far from any bend, they are what they seem.
     """
-    guesses = [guess(row, -one.real, power) for power in (1, 2)]
     bins = row.data.shape[1]
-    known = [g for g in guesses if g is not None]
-    if not alone and settled_chi2 < AT_NOISE * bins and left > BENT_LEAVES and known:
-        bent = min(g.bent for g in known)
-        if bent > max(FAR_FROM_BENT, BENT_SHARE * max(g.straight for g in known)):
-            return []
-    fits = []
-    for power, g in zip((1, 2), guesses, strict=True):
-        starts = [g.law] if g is not None else []
-        if alone or g is None:
-            starts.append(Law(one.imag, -one.real, 0.0, 0.0, power))
-        best: LineFit | None = None
-        for start in starts:
-            fit = fit_line(row, start, hopeless=math.inf if alone else 30.0 * max(settled_chi2, float(bins)))
-            if best is None or fit.chi2 < best.chi2:
-                best = fit
-            if best.chi2 < AT_NOISE * bins:
-                break
-        if best is not None:
-            fits.append(best)
-    return fits
-
-
-def rivals(row: BinRows, pole: ComplexArray, amplitude: ComplexArray, one: complex) -> tuple[float, float]:
-    """chi2 of two and of three straight lines on the same bins, each the best of several starts."""
-    a = -one.real
-    order = np.argsort(-(np.abs(amplitude) ** 2) / -pole.real)
-    ranked = pole[order]
-    pairs = [(one, one - a), (one + 0.5j * a, one - 0.5j * a), (one + 2j * a, one - 0.3 * a), (one - 2j * a, one - 0.3 * a)]
-    pairs += [(ranked[0], other) for other in ranked[1:3]]
-    fit = _best_of(row, np.array(pairs))
-    two = fit[0]
-    triples = [(*fit[1], one - 2 * a), (*fit[1], fit[1][0] + 2j * a), (*fit[1], fit[1][0] - 2j * a)]
-    if len(ranked) >= 3:
-        triples.append((ranked[0], ranked[1], ranked[2]))
-    return two, min(two, _best_of(row, np.array(triples))[0])
-
-
-def _best_of(row: BinRows, starts: ComplexArray) -> tuple[float, ComplexArray]:
-    rows = row.take(np.zeros(len(starts), dtype=np.int64))
-    with np.errstate(all="ignore"):
-        fit = fit_rows(rows, starts, steps=15)
-    best = int(np.nanargmin(fit.chi2))
-    return float(fit.chi2[best]), fit.pole[best]
+    known = [g for g in (guess(row, -one.real, power) for power in (1, 2)) if g is not None]
+    bent = min((g.bent for g in known), default=math.inf)
+    unlike = bent > BENT_SHARE * max((g.straight for g in known), default=0.0)
+    if unlike and one_chi2 - bend > AT_NOISE * bins and bend < LEAST_BENT * one_chi2:
+        return []
+    resolved = not alone and settled_chi2 < AT_NOISE * bins and one_chi2 - bend > BENT_LEAVES * one_chi2
+    if resolved and unlike and bent > FAR_FROM_BENT:
+        return []
+    hopeless = max(0.8 * settled_chi2, 2.0 * bins) if alone else HOPELESS * max(settled_chi2, float(bins))
+    straight = [Law(one.imag, -one.real, 0.0, 0.0, power) for power in (1, 2)] if alone or not known else []
+    fits: dict[int, LineFit] = {}
+    for start in [g.law for g in known] + straight:
+        had = fits.get(start.power)
+        if had is None or had.chi2 > AT_NOISE * bins:
+            fit = fit_line(row, start, hopeless=hopeless)
+            fits[start.power] = fit if had is None or fit.chi2 < had.chi2 else had
+    return list(fits.values())
 
 
 def _drift(ring: Ring, row: BinRows, start: int, fits: list[LineFit], level: float, gain: float) -> Drift:

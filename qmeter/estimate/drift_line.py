@@ -17,7 +17,7 @@ from dataclasses import dataclass
 import numpy as np
 import scipy.fft
 
-from qmeter.estimate.poles import BinRows, ComplexArray, FloatArray
+from qmeter.estimate.poles import BinRows, ComplexArray, FloatArray, bin_response, fit_rows
 
 _OVERSAMPLING = 4
 """grid points of the model per bin: the end corrections below then leave 1e-6 of the peak"""
@@ -161,7 +161,7 @@ def _real(x: ComplexArray) -> FloatArray:
 def fit_line(row: BinRows, start: Law, *, steps: int = 25, hopeless: float = np.inf) -> LineFit:
     """Levenberg-Marquardt from `start` on one row of plain bins; the amplitude is solved for at each step.
 
-    A fit whose chi2 is above `hopeless` after eight steps is left there.
+    A fit whose chi2 is above `hopeless` after six steps is left there.
     """
     root = np.sqrt(row.weight[0])
     power = start.power
@@ -169,6 +169,8 @@ def fit_line(row: BinRows, start: Law, *, steps: int = 25, hopeless: float = np.
     normal, push, scale = _normal(point)
     mu = 1e-3
     for turn in range(steps):
+        if turn == 6 and point.chi2 > hopeless:
+            break
         damped = normal * scale[:, None] * scale + mu * np.eye(4)
         step = scale * np.linalg.solve(damped, scale * push)
         trial = point.theta + np.clip(step, [-np.inf, -0.7, -1.0, -np.inf], [np.inf, 0.7, 1.0, np.inf])
@@ -182,7 +184,7 @@ def fit_line(row: BinRows, start: Law, *, steps: int = 25, hopeless: float = np.
         gain = point.chi2 - new.chi2
         point, mu = new, mu * 0.1
         normal, push, scale = _normal(point)
-        if gain < 1e-2 + 1e-5 * point.chi2 or (turn >= 8 and point.chi2 > hopeless):
+        if gain < max(1e-2 + 1e-5 * point.chi2, 1e-3 * (point.chi2 - 4.0 * len(root))):
             break
     inverse = scale[:, None] * np.linalg.pinv(normal * scale[:, None] * scale) * scale
     residual = row.data[0] - point.model
@@ -242,3 +244,48 @@ def guess(row: BinRows, decay: float, power: int) -> Guess | None:
     centre = 2 * np.pi * (int(row.first_bin[0]) + bins // 2) / length
     k = float(np.clip(-power * x[2].real, -0.6, 2.0))
     return Guess(Law(float(centre + x[1].imag), decay, k, float(power * x[2].imag), power), misfit[-1], misfit[0])
+
+
+def score(row: BinRows, pole: complex) -> float:
+    """Gain of log likelihood that a bend would bring to first order, over the straight line `pole` that fits best."""
+    poles = np.array([[pole, pole + pole.real, pole + 2 * pole.real]])
+    d, g, d_mirror, g_mirror = (x[0] for x in bin_response(poles, row.first_bin, row.length, row.data.shape[1], hann=False))
+    root = np.sqrt(row.weight[0])
+
+    def columns(own: ComplexArray, mirror: ComplexArray) -> FloatArray:
+        pair = 0.5 * root * np.stack([own + mirror, 1j * (own - mirror)])
+        return np.asarray(np.concatenate([pair.real, pair.imag], axis=1).T)
+
+    white = row.data[0] * root
+    y = np.concatenate([white.real, white.imag])
+    straight = np.linalg.qr(np.concatenate([columns(d[0], d_mirror[0]), columns(g[0], g_mirror[0])], axis=1))[0]
+    y = y - straight @ (straight.T @ y)
+    gains = []
+    for p in (1, 2):
+        bend = columns(d[p], d_mirror[p])
+        bend = np.linalg.qr(bend - straight @ (straight.T @ bend))[0]
+        gains.append(float(np.sum((bend.T @ y) ** 2)))
+    return max(gains)
+
+
+def rivals(row: BinRows, pole: ComplexArray, amplitude: ComplexArray, one: complex) -> tuple[float, float]:
+    """chi2 of two and of three straight lines on the same bins, each the best of several starts."""
+    a = -one.real
+    order = np.argsort(-(np.abs(amplitude) ** 2) / -pole.real)
+    ranked = pole[order]
+    pairs = [(one, one - a), (one + 0.5j * a, one - 0.5j * a), (one + 2j * a, one - 0.3 * a), (one - 2j * a, one - 0.3 * a)]
+    pairs += [(ranked[0], other) for other in ranked[1:3]]
+    fit = _best_of(row, np.array(pairs))
+    two = fit[0]
+    triples = [(*fit[1], one - 2 * a), (*fit[1], fit[1][0] + 2j * a), (*fit[1], fit[1][0] - 2j * a)]
+    if len(ranked) >= 3:
+        triples.append((ranked[0], ranked[1], ranked[2]))
+    return two, min(two, _best_of(row, np.array(triples))[0])
+
+
+def _best_of(row: BinRows, starts: ComplexArray) -> tuple[float, ComplexArray]:
+    rows = row.take(np.zeros(len(starts), dtype=np.int64))
+    with np.errstate(all="ignore"):
+        fit = fit_rows(rows, starts, steps=15)
+    best = int(np.nanargmin(fit.chi2))
+    return float(fit.chi2[best]), fit.pole[best]
