@@ -11,7 +11,10 @@ from qmeter.dsp.noise import NoiseSpectrum
 from qmeter.dsp.strikes import StrikeSpan
 from qmeter.estimate.modes import Doubt, Mode
 
-FEW_DB = 15.0
+FEW_DB = 25.0
+"""range of decay above the noise in the half-power width; Q is then known to about 40 % at best (the bound)"""
+FALL_WANTED_DB = 40.0
+"""of a mode in a strike that is cut off: with more its decay is known, whatever comes below"""
 TIME_CONSTANTS_WANTED = 3.0
 """of a mode that is cut off: with less than these 26 dB the decay is not known from its own fall alone"""
 CUT_DB = 10.0

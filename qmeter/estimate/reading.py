@@ -102,7 +102,8 @@ def _finite(s: Settled) -> Settled:
     """Modes all of whose numbers are numbers."""
     ok = np.isfinite(s.poles.pole) & np.isfinite(s.poles.amplitude) & (np.abs(s.poles.amplitude) > 0) & (s.poles.pole.real < 0)
     variance = np.diagonal(s.covariance, axis1=1, axis2=2)
-    return s.take(ok & np.all(np.isfinite(s.covariance), axis=(1, 2)) & np.all(variance > 0, axis=1))
+    told = np.isfinite(s.covariance).all(axis=(1, 2)) & np.isfinite(s.model).all(axis=(1, 2)) & (variance > 0).all(axis=1)
+    return s.take(ok & told)
 
 
 def _modes(ring: Ring, s: Settled, settings: Settings, model: FloatArray | None = None) -> list[Mode]:
@@ -153,8 +154,10 @@ def _doubted(what: Heard, span: StrikeSpan, s: Settled, modes: list[Mode]) -> tu
         said = [paired[i], doubts.filter_limited(mode, ring.low_hz, ring.high_hz)]
         seen_s = len(ring.samples) / ring.rate
         nepers = mode.amplitude_decay_rate_per_s * seen_s
-        over = mode.snr_db - _DB_PER_NEPER * nepers
-        if over > doubts.CUT_DB and (cut or nepers < doubts.TIME_CONSTANTS_WANTED):
+        fallen_db = _DB_PER_NEPER * nepers
+        over = mode.snr_db - fallen_db
+        short = nepers < doubts.TIME_CONSTANTS_WANTED or (cut and fallen_db < doubts.FALL_WANTED_DB)
+        if over > doubts.CUT_DB and short:
             said.append(doubts.mode_cut_off(mode.amplitude_decay_rate_per_s, seen_s, over))
         elif mode.decay_range_db < doubts.FEW_DB:
             said.append(doubts.few_decibels(mode.decay_range_db))
