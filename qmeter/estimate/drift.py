@@ -19,8 +19,7 @@ from qmeter.dsp.noise import FloatArray, fast_length
 from qmeter.estimate.drift_line import Law, LineFit, envelope_of, fit_line, guess, rivals, score
 from qmeter.estimate.find import Poles, Ring
 from qmeter.estimate.modes import Doubt
-from qmeter.estimate.poles import BinRows, ComplexArray, bin_response, fit_rows
-from qmeter.estimate.settle import Settled
+from qmeter.estimate.poles import BinRows, ComplexArray, IntArray, bin_response, fit_rows
 
 LEAST_SNR_DB = 25.0
 MOST_LINES = 8
@@ -122,20 +121,20 @@ class Drift:
 
 
 def find_drifts(
-    ring: Ring, settled: Settled, contact: int = 0, candidates: Poles | None = None, rest: FloatArray | None = None
+    ring: Ring, settled: Poles, start: IntArray, contact: int = 0, candidates: Poles | None = None, rest: FloatArray | None = None
 ) -> tuple[Drift, ...]:
     """The drifting modes among the settled ones, strongest first.
 
-    `contact` is the sample at which the contact force has ended. `candidates` are what `find_modes` gave: a line that drifts so far
-    that no fit of it settled is found through them (it then replaces nothing). `rest` is what the settled modes leave of the ring,
-    where it is at hand; steady tones may be taken away there too.
+    `start` (M,) is the sample from which each settled mode was fitted, `contact` that at which the contact force has ended.
+    `candidates` are what `find_modes` gave: a line that drifts so far that no fit of it settled is found through them (it then
+    replaces nothing). `rest` is what the settled modes leave of the ring, where it is at hand; steady tones may be taken away there too.
     """
-    poles, start = _pool(settled, candidates, contact)
-    strong = _strong_lines(ring, poles, len(settled.poles))
+    poles, start = _pool(settled, start, candidates, contact)
+    strong = _strong_lines(ring, poles, len(settled))
     if not len(strong):
         return ()
-    left = rest if rest is not None else ring.samples - ring_sum(settled.poles.pole, settled.poles.amplitude, 0, len(ring.samples))
-    asker = _Asker(ring, poles, len(settled.poles), left)
+    left = rest if rest is not None else ring.samples - ring_sum(settled.pole, settled.amplitude, 0, len(ring.samples))
+    asker = _Asker(ring, poles, len(settled), left)
     taken: set[int] = set()
     out: list[Drift] = []
     for i in (int(j) for j in strong):
@@ -146,19 +145,18 @@ def find_drifts(
         late, early = int(start[i]), _early(poles, i, contact, len(ring.samples))
         # a line that misses the noise is started late by `settle`, past most of its bend
         found = asker.ask(members, early, wary=True) if -poles.pole[i].real * (late - early) > LATE else None
-        found = found or asker.ask(members, late, wary=i >= len(settled.poles))
+        found = found or asker.ask(members, late, wary=i >= len(settled))
         if found is None or math.sqrt(found.covariance[1, 1]) > LEAST_WORTH * found.decay_rate_per_s:
             continue
         passed = _passed(poles, i, found, ring.rate)
         if not passed & taken:
-            taken |= passed | {j for j in everyone if j >= len(settled.poles)}
-            out.append(replace(found, replaces=tuple(sorted(j for j in passed if j < len(settled.poles)))))
+            taken |= passed | {j for j in everyone if j >= len(settled)}
+            out.append(replace(found, replaces=tuple(sorted(j for j in passed if j < len(settled)))))
     return tuple(out)
 
 
-def _pool(settled: Settled, candidates: Poles | None, contact: int) -> tuple[Poles, np.ndarray]:
+def _pool(poles: Poles, start: IntArray, candidates: Poles | None, contact: int) -> tuple[Poles, IntArray]:
     """The settled modes and the candidates that none of them stands for, with their starts."""
-    poles, start = settled.poles, settled.start
     if candidates is None or not len(candidates):
         return poles, start
     gap = np.abs(candidates.pole.imag[:, None] - poles.pole.imag)
@@ -370,7 +368,7 @@ def _misfit(row: BinRows, fit: LineFit, end: float) -> FloatArray:
     spacing = int(row.length[0]) / bins
     left, model = envelope_of(fit.residual), envelope_of(fit.model)
     noise = float(np.sum(1.0 / row.weight[0])) / bins**2
-    count = int(end / spacing)
+    count = min(int(end / spacing), bins - 2)
     fifth = max(count // 5, 2)
     if count < 10:
         return np.zeros(2)
