@@ -25,7 +25,7 @@ _HEARD_S = 0.3
 _WINDOW_S = 0.008
 _GROWTH_S = 0.4
 DRIVEN = ((0.3, 0.95), (1.0, 0.5), (2.0, 0.15), (6.0, 0.05))
-"""growth in dB, and the share of the energy that modes leave: a sound that has more of both is no ring. Most speech-like bursts grow by 1 to
+"""growth in dB, and the share of the energy that modes leave: a sound with more of both is no ring. Most speech-like bursts grow by 1 to
 25 dB and leave 0.2 or more; struck rings that grow by 2 dB or more left below 0.02, crowded ones that leave 0.2 grew by 0.6 dB at most"""
 
 
