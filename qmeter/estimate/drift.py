@@ -16,10 +16,11 @@ import numpy as np
 from qmeter import relations
 from qmeter.dsp.band import bins_around, ring_sum, spectrum_of
 from qmeter.dsp.noise import FloatArray, fast_length
-from qmeter.estimate.drift_line import Law, LineFit, envelope_of, fit_line, guess, rivals, score
+from qmeter.estimate.drift_line import Law, LineFit, chord, chord_covariance, envelope_of, fit_line, guess, rivals, score
 from qmeter.estimate.find import Poles, Ring
 from qmeter.estimate.modes import Doubt
 from qmeter.estimate.poles import BinRows, ComplexArray, IntArray, bin_response, fit_rows
+from qmeter.estimate.profile import profiles
 
 LEAST_SNR_DB = 25.0
 MOST_LINES = 8
@@ -41,6 +42,8 @@ MORE = 6.0
 LATE = 0.25
 """time constants of a late start that call for a second look from the earliest"""
 MOST_UNSETTLED = 2
+KNOCK = 0.5
+"""time constants at the start whose band is watched for a knock"""
 HOPELESS = 8.0
 """times the chi2 of the settled lines above which a fit in a crowd is given up after six steps"""
 LEAST_WORTH = 0.1
@@ -229,7 +232,27 @@ class _Asker:
         more = MORE * level if level < AT_NOISE else 0.0
         if best.chi2 > two + more or best.chi2 > max(1.25 * three, three + 2 * more):
             return None
-        return _drift(self._ring, row, start, fits, level, gain)
+        drift = _drift(self._ring, row, start, fits, level, gain)
+        knock = self._knock(drift, members)
+        if knock <= level or level > AT_NOISE:
+            return drift
+        if gain * level / knock < EVIDENCE:
+            return None
+        return replace(drift, significance=gain * level / knock, covariance=drift.covariance * (knock / level))
+
+    def _knock(self, drift: Drift, members: list[int]) -> float:
+        """What stands in the band beside the line in its first half time constant, over what stands there later (noise at least).
+
+        A knock bends every line that starts in it; it fills the band, a drift does not.
+        """
+        rate, own = self._ring.rate, [m for m in members if m < self._settled]
+        rest = self._rest - drift.synthesise(len(self._rest), rate)
+        rest += ring_sum(self._poles.pole[own], self._poles.amplitude[own], 0, len(rest))
+        rest[: round(drift.start_s * rate)] = 0.0
+        a, t = drift.decay_rate_per_s, drift.start_s
+        band = profiles(self._ring, rest, self._poles).near(drift.damped_frequency_hz, a)
+        means = band.mean_between(np.array([t, t + 3.0 / a]), np.array([t + KNOCK / a, t + 8.0 / a]))
+        return float(means[0] / max(float(means[1]), 1.0))
 
     def rows(self, members: list[int], start: int) -> tuple[BinRows, BinRows]:
         """From `start`: the bins around the members, with them and without the settled ones among them."""
@@ -302,11 +325,11 @@ def _drift(ring: Ring, row: BinRows, start: int, fits: list[LineFit], level: flo
     end = _end_of(ring, best, start)
     share = np.exp(-np.array([f.chi2 - best.chi2 for f in fits]) / level)
     share /= share.sum()
-    values = np.array([_chord(f.law.vector, f.law.power, end) for f in fits])
+    values = np.array([chord(f.law.vector, f.law.power, end) for f in fits])
     mean = share @ values
     covariance = np.zeros((2, 2))
     for w, fit, value in zip(share, fits, values, strict=True):
-        covariance += w * (_chord_covariance(fit, end) * level + np.outer(value - mean, value - mean))
+        covariance += w * (chord_covariance(fit, end) * level + np.outer(value - mean, value - mean))
     covariance += np.diag(_misfit(row, best, end))
     to_si = np.array([ring.rate / (2 * math.pi), ring.rate])
     back = complex(best.law.rate(np.zeros(1))[0]) * start
@@ -344,19 +367,6 @@ def _end_of(ring: Ring, fit: LineFit, start: int) -> float:
     t = np.linspace(0.0, min(last, 12.0 / fit.law.decay), 600)
     fallen = -NEPER_DB * fit.law.log_line(t).real
     return float(t[max(int(np.searchsorted(fallen, min(STRETCH_DB, max(above, 10.0)))) - 1, 1)])
-
-
-def _chord(theta: FloatArray, power: int, end: float) -> FloatArray:
-    """Mean frequency (rad) and decay rate per sample from the start to `end`."""
-    log_end = complex(Law.of(theta, power).log_line(np.array([end]))[0])
-    return np.array([log_end.imag, -log_end.real]) / end
-
-
-def _chord_covariance(fit: LineFit, end: float) -> FloatArray:
-    theta, power = fit.law.vector, fit.law.power
-    steps = 1e-4 * np.array([fit.law.decay, 1.0, 1.0, max(1.0, abs(fit.law.glide))])
-    slope = np.array([(_chord(theta + h, power, end) - _chord(theta - h, power, end)) for h in np.diag(steps)]).T / (2 * steps)
-    return np.asarray(slope @ fit.covariance @ slope.T)
 
 
 def _misfit(row: BinRows, fit: LineFit, end: float) -> FloatArray:

@@ -289,3 +289,17 @@ def _best_of(row: BinRows, starts: ComplexArray) -> tuple[float, ComplexArray]:
         fit = fit_rows(rows, starts, steps=15)
     best = int(np.nanargmin(fit.chi2))
     return float(fit.chi2[best]), fit.pole[best]
+
+
+def chord(theta: FloatArray, power: int, end: float) -> FloatArray:
+    """Mean frequency (rad) and decay rate per sample from the start to `end`."""
+    log_end = complex(Law.of(theta, power).log_line(np.array([end]))[0])
+    return np.array([log_end.imag, -log_end.real]) / end
+
+
+def chord_covariance(fit: LineFit, end: float) -> FloatArray:
+    """Covariance of the two, for the weights of the fit."""
+    theta, power = fit.law.vector, fit.law.power
+    steps = 1e-4 * np.array([fit.law.decay, 1.0, 1.0, max(1.0, abs(fit.law.glide))])
+    slope = np.array([(chord(theta + h, power, end) - chord(theta - h, power, end)) for h in np.diag(steps)]).T / (2 * steps)
+    return np.asarray(slope @ fit.covariance @ slope.T)
