@@ -369,3 +369,16 @@ def test_a_tap_beside_speech_is_still_measured() -> None:
     assert len(accepted) == 1
     assert abs(accepted[0].onset_s - 1.0) < 2e-3
     assert_allclose([mode.q.value for mode in measured.modes], [110.0, 60.0], rtol=1e-2, atol=0)
+
+
+def test_strikes_cut_short_by_the_next_are_set_aside() -> None:
+    """Three taps a tenth of a second apart and one that rings out: only the last can tell a mode of 0.4 s, and only it is pooled."""
+    modes = [(500.0, 600.0, 0.3), (1700.0, 90.0, 0.3)]
+    x = ring(modes, quiet_s=1.0, seconds=2.5)
+    for k in range(1, 4):
+        early = int(0.1 * k * RATE)
+        x[:-early] += ring(modes, quiet_s=1.0, seconds=2.5, seed=k + 1, noise=0.0)[early:]
+    measured = measure_samples(x, RATE)
+    assert [strike.accepted for strike in measured.strikes] == [False, False, False, True]
+    assert "cut-off" in {doubt.code for doubt in measured.strikes[0].doubts}
+    assert_allclose(sorted(mode.q.value for mode in measured.modes[:2]), [90.0, 600.0], rtol=1e-2, atol=0)

@@ -76,9 +76,13 @@ def _measure_channel(samples: FloatArray, rate: float, asked: Settings, bits: in
 
 
 def _accepted(readings: Sequence[Reading]) -> tuple[Strike, ...]:
-    """The strikes, those that are spoiled set aside when others are good."""
-    good = any(reading.strike.modes and not reading.spoiled for reading in readings)
-    return tuple(replace(reading.strike, accepted=bool(reading.strike.modes) and not (reading.spoiled and good)) for reading in readings)
+    """The strikes, those that are spoiled set aside when others are good; so are those cut too short for what the longest one shows."""
+    good = [reading for reading in readings if reading.strike.modes and not reading.spoiled]
+    if good:
+        longest = max(good, key=lambda reading: reading.strike.usable_s)
+        good = [reading for reading in good if reading is longest or not reading.too_short_for(longest.strike.modes)]
+    kept = good or [reading for reading in readings if reading.strike.modes]
+    return tuple(replace(reading.strike, accepted=any(reading is other for other in kept)) for reading in readings)
 
 
 def _asked_for(modes: tuple[Mode, ...], asked: Settings) -> tuple[tuple[Mode, ...], Doubt | None]:
@@ -99,7 +103,7 @@ def _asked_for(modes: tuple[Mode, ...], asked: Settings) -> tuple[tuple[Mode, ..
 def _tones(samples: FloatArray, rate: float, readings: Sequence[Reading], modes: Sequence[Mode], quantum: float) -> list[Doubt]:
     """What does not decay, named: from the quiet of the first strike that has one, or without strikes from the last seconds."""
     strongest = max((abs(mode.amplitude) for mode in modes), default=None)
-    spectra = [reading.noise for reading in readings if reading.noise is not None and len(reading.noise.tones_hz)]
+    spectra = [reading.noise for reading in readings if len(reading.noise.tones_hz)]
     if not readings and np.ptp(samples) > 0 and len(samples) > 512:
         spectra = [noise_spectrum(samples[-int(_TONE_SECONDS * rate) :], rate, quantum=quantum)]
     said = doubts.steady_tones(max(spectra, key=lambda noise: -noise.resolution_hz), strongest) if spectra else None

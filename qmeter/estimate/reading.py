@@ -31,11 +31,17 @@ _SILENT = 1e-10
 
 @dataclass(frozen=True, slots=True)
 class Reading:
-    """A strike, whether something spoils it though modes rang, and the noise before it."""
+    """A strike, whether something spoils it though modes rang, whether it is cut off above the noise, and the noise before it."""
 
     strike: Strike
     spoiled: bool
-    noise: NoiseSpectrum | None
+    cut: bool
+    noise: NoiseSpectrum
+
+    def too_short_for(self, modes: tuple[Mode, ...]) -> bool:
+        """Whether it is cut off before a loud one of these modes, read in another strike, has fallen by three time constants."""
+        loud = [mode.amplitude_decay_rate_per_s for mode in modes if mode.level_db > -_LOUD_DB]
+        return self.cut and bool(loud) and min(loud) * self.strike.usable_s < doubts.TIME_CONSTANTS_WANTED
 
 
 def read_strike(samples: FloatArray, rate: float, span: StrikeSpan, settings: Settings, quantum: float = 0.0) -> Reading:
@@ -62,7 +68,7 @@ def read_strike(samples: FloatArray, rate: float, span: StrikeSpan, settings: Se
         modes=modes,
     )
     spoiled = bool(modes) and (span.clipped or span.second_contact is not None or _short(modes, what, span))
-    return Reading(strike, spoiled, what.ring.noise)
+    return Reading(strike, spoiled, span.cut_by_end or span.cut_by_next, what.ring.noise)
 
 
 def _contact_doubts(span: StrikeSpan, rate: float) -> list[Doubt]:
