@@ -241,10 +241,7 @@ class _Asker:
         return replace(drift, significance=gain * level / knock, covariance=drift.covariance * (knock / level))
 
     def _knock(self, drift: Drift, members: list[int]) -> float:
-        """What stands in the band beside the line in its first half time constant, over what stands there later (noise at least).
-
-        A knock bends every line that starts in it; it fills the band, a drift does not.
-        """
+        """What stands in the band beside the line in its first half time constant, over what does later: a knock bends every line."""
         rate, own = self._ring.rate, [m for m in members if m < self._settled]
         rest = self._rest - drift.synthesise(len(self._rest), rate)
         rest += ring_sum(self._poles.pole[own], self._poles.amplitude[own], 0, len(rest))
