@@ -208,6 +208,9 @@ class _Asker:
         if bins < 12:
             return None
         pole, near = self._poles.pole[members], len(members) > 1
+        # a pole a little off its best only adds to the score, so the clean case needs no fit
+        if not near and score(row, complex(pole[0])) < 0.7 * EVIDENCE:
+            return None
         one = fit_rows(row, pole[None, :1], steps=12)
         line, one_chi2 = complex(one.pole[0, 0]), float(one.chi2[0])
         settled_chi2 = float(np.sum(without.weight * np.abs(without.data) ** 2))
