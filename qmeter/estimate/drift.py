@@ -138,8 +138,7 @@ def find_drifts(
         return ()
     left = rest if rest is not None else ring.samples - ring_sum(settled.pole, settled.amplitude, 0, len(ring.samples))
     asker = _Asker(ring, poles, len(settled), left)
-    taken: set[int] = set()
-    out: list[Drift] = []
+    taken, out = set[int](), list[Drift]()
     for i in (int(j) for j in strong):
         if i in taken:
             continue
