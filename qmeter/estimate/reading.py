@@ -20,7 +20,10 @@ from qmeter.estimate.settle import SHORTEST, Settled, settle
 
 _DB_PER_NEPER = 8.685889638
 _TRACE_POINTS = 240
+_HEARD_DB = 20.0
+"""and set aside when one this near to the strongest of a longer strike cannot be told in it"""
 _ROUGHLY_ALL = 0.02
+"""share of the energy; speech leaves three times as much and more"""
 _FALLEN_DB = 20.0
 """a strike that has fallen by less when it is cut off is set aside where others are good"""
 _LOUD_DB = 10.0
@@ -40,7 +43,7 @@ class Reading:
 
     def too_short_for(self, modes: tuple[Mode, ...]) -> bool:
         """Whether it is cut off before a loud one of these modes, read in another strike, has fallen by three time constants."""
-        loud = [mode.amplitude_decay_rate_per_s for mode in modes if mode.level_db > -_LOUD_DB]
+        loud = [mode.amplitude_decay_rate_per_s for mode in modes if mode.level_db > -_HEARD_DB]
         return self.cut and bool(loud) and min(loud) * self.strike.usable_s < doubts.TIME_CONSTANTS_WANTED
 
 
