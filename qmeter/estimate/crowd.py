@@ -13,6 +13,7 @@ import numpy as np
 from qmeter.dsp.band import ring_sum
 from qmeter.estimate.find import Poles, Ring, find_modes
 from qmeter.estimate.joint import JointFit, joint_fit
+from qmeter.estimate.ladder import Rungs, rungs_of, summary
 from qmeter.estimate.poles import FloatArray
 
 TURNS = 4
@@ -25,9 +26,6 @@ RUNGS = (
     *((t, 0.16) for t in (0.0, 0.005)),
 )
 """(start after the end of contact in s, share of the full length)"""
-HEAVIEST = 0.25
-"""share of the total weight that one rung may have"""
-
 
 @dataclass(frozen=True, slots=True)
 class Crowd:
@@ -91,9 +89,9 @@ def _new_modes(ring: Ring, poles: Poles) -> Poles:
 def _ladder(ring: Ring, poles: Poles, start: int, length: int) -> Crowd:
     """The fixed ladder: every rung a joint fit from the same poles."""
     m = len(poles)
-    values: list[list[FloatArray]] = [[] for _ in range(m)]
-    covariances: list[list[FloatArray]] = [[] for _ in range(m)]
-    asked = np.zeros(m, int)
+    values: tuple[list[FloatArray], ...] = tuple([] for _ in range(m))
+    covariances: tuple[list[FloatArray], ...] = tuple([] for _ in range(m))
+    asked = np.zeros(m, np.int64)
     for delay_s, share in RUNGS:
         t0 = start + int(delay_s * ring.rate)
         n = int(share * length)
@@ -114,36 +112,11 @@ def _ladder(ring: Ring, poles: Poles, start: int, length: int) -> Crowd:
             if good[j]:
                 values[i].append(np.array([-fit.poles.pole[j].real, fit.poles.pole[j].imag]))
                 covariances[i].append(fit.covariance[j])
-    held = np.array([len(values[i]) / max(asked[i], 1) for i in range(m)])
+    rungs = Rungs(values, covariances, asked).plus(rungs_of(ring, poles, start, 1e-9))
     pole, fit_part, model_part = poles.pole.copy(), np.full((m, 2, 2), np.inf), np.full((m, 2, 2), np.inf)
     for i in range(m):
-        if len(values[i]) < 2:
+        if len(rungs.values[i]) < 2:
             continue
-        mean, fit_part[i], model_part[i] = _summary(np.array(values[i]), np.array(covariances[i]))
+        mean, fit_part[i], model_part[i] = summary(np.array(rungs.values[i]), np.array(rungs.covariances[i]))
         pole[i] = -mean[0] + 1j * mean[1]
-    return Crowd(Poles(pole, poles.amplitude), fit_part, model_part, held, start, length)
-
-
-def _summary(values: FloatArray, covariances: FloatArray) -> tuple[FloatArray, FloatArray, FloatArray]:
-    """Weighted mean over rungs, the mean covariance of the three best determined, and the weighted scatter.
-
-    The rungs share their data: the scatter is not divided by their number.
-    """
-    variance = covariances[:, 0, 0]
-    weight = 1.0 / variance
-    weight = weight / weight.sum()
-    for _ in range(3):
-        weight = np.minimum(weight, HEAVIEST)
-        weight = weight / weight.sum()
-    mean = weight @ values
-    off = values - mean
-    spread = np.sqrt(np.maximum(np.median(off**2, axis=0), 1e-300)) * 1.4826
-    good = (np.abs(off) < 4.0 * spread + 3.0 * np.sqrt(covariances[:, [0, 1], [0, 1]])).all(axis=1)
-    if good.sum() >= 2:
-        weight = np.where(good, weight, 0.0)
-        weight /= weight.sum()
-        mean = weight @ values
-        off = values - mean
-    model = np.einsum("r,ri,rj->ij", weight, off, off)
-    best = np.argsort(variance)[:3]
-    return mean, covariances[best].mean(axis=0), model
+    return Crowd(Poles(pole, poles.amplitude), fit_part, model_part, rungs.held(), start, length)

@@ -17,7 +17,10 @@ from qmeter.estimate.poles import BinRows, ComplexArray, fit_rows
 
 HANN_POWER = 0.375
 """mean square of the Hann weights"""
-_PEAK_OVER_FLOOR = 25.0
+_PEAK_OVER_NOISE = 25.0
+"""power of a peak over the noise: noise alone reaches it once in exp(25) bins"""
+_PEAK_OVER_LOCAL = 8.0
+"""power of a peak over the median of the spectrum around it; what is not a mode there does not hold still later"""
 _MEDIAN_TO_MEAN = 1.0 / np.log(2.0)
 _LOOK_BINS = 24
 _SHORTEST_S = 0.004
@@ -88,15 +91,15 @@ def find_modes(ring: Ring, *, rounds: int = 3) -> Poles:
 
 
 def floor_of(power: FloatArray, ring: Ring, length: int, *, hann: float = HANN_POWER, block: int = 48) -> FloatArray:
-    """Expected power of a bin: the larger of the noise and the local median of the spectrum itself (blocks of `block` bins)."""
+    """What a peak must exceed: `_PEAK_OVER_NOISE` times the noise, and `_PEAK_OVER_LOCAL` times the local median of the spectrum itself."""
     bins = len(power)
     blocks = max(bins // block, 1)
     used = blocks * block if bins >= block else bins
-    medians = np.median(power[:used].reshape(blocks, -1), axis=1) * _MEDIAN_TO_MEAN
-    centre_hz = (np.arange(blocks) + 0.5) * (used / blocks) * ring.rate / length
-    known = ring.noise.at(centre_hz) * (length * ring.rate / 2 * hann)
-    level = np.maximum(medians, known)
-    return np.repeat(level, used // blocks) if used == bins else np.append(np.repeat(level, used // blocks), np.full(bins - used, level[-1]))
+    medians = np.median(power[:used].reshape(blocks, -1), axis=1) * (_MEDIAN_TO_MEAN * _PEAK_OVER_LOCAL)
+    centre = (np.arange(blocks) + 0.5) * (used / blocks)
+    known = ring.noise.at(np.maximum(centre, 0.5) * ring.rate / length) * (length * ring.rate / 2 * hann * _PEAK_OVER_NOISE)
+    level = np.log(np.maximum(np.maximum(medians, known), 1e-300))
+    return np.asarray(np.exp(np.interp(np.arange(bins), centre, level)))
 
 
 def _look(ring: Ring, bins: ComplexArray, length: int, *, longest: bool, hann: bool) -> Poles:
@@ -108,7 +111,7 @@ def _look(ring: Ring, bins: ComplexArray, length: int, *, longest: bool, hann: b
     if hi - lo < 2:
         return Poles.none()
     mid = power[lo:hi]
-    is_peak = (mid > power[lo - 1 : hi - 1]) & (mid >= power[lo + 1 : hi + 1]) & (mid > _PEAK_OVER_FLOOR * floor[lo:hi])
+    is_peak = (mid > power[lo - 1 : hi - 1]) & (mid >= power[lo + 1 : hi + 1]) & (mid > floor[lo:hi])
     peaks = np.flatnonzero(is_peak) + lo
     if not len(peaks):
         return Poles.none()
@@ -184,7 +187,7 @@ def _plausible(
     moved = np.abs(pole.imag * length / (2 * np.pi) - peaks)
     energy = (np.abs(amplitude) / 2 * (1 - np.exp(-decays)) / (decays / length)) ** 2 * HANN_POWER
     return np.asarray(
-        (decays < most_decays) & (decays > (0.0 if longest else 0.3)) & (moved < 2.0 + decays / np.pi) & (energy > 6.0 * level[:, None]) & (amplitude != 0)
+        (decays < most_decays) & (decays > (0.0 if longest else 0.3)) & (moved < 2.0 + decays / np.pi) & (energy > 0.3 * level[:, None]) & (amplitude != 0)
     )
 
 

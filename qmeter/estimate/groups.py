@@ -102,7 +102,7 @@ def _halvings(frames: int) -> list[int]:
 
 
 def batches(
-    ring: Ring, poles: Poles, groups: list[IntArray], starts: IntArray, looks: Looks, still: float, changed: tuple[Poles, list[IntArray]] | None = None
+    ring: Ring, poles: Poles, groups: list[IntArray], starts: IntArray, looks: Looks, still: float, changed: tuple[Poles, list[IntArray]] | None = None, *, long: float = LONG
 ) -> list[Batch]:
     """The rows that fit `groups`: what is left of the ring around each, with the group's own modes put back.
 
@@ -113,7 +113,7 @@ def batches(
     for number, group in enumerate(groups):
         s = poles.pole[group]
         start = int(starts[group].min())
-        length = looks.length_for(_span_of(-s.real, LONG, still), start)
+        length = looks.length_for(_span_of(-s.real, long, still), start)
         first, bins = _bins_for(s, length)
         shapes.setdefault((len(group), bins), []).append((group, start, length, first, number))
     out = []
@@ -176,7 +176,7 @@ class GroupFit:
 
 
 def fit_groups(
-    ring: Ring, poles: Poles, groups: list[IntArray], starts: IntArray, looks: Looks, still: float, *, steps: int, loudest: float = np.inf
+    ring: Ring, poles: Poles, groups: list[IntArray], starts: IntArray, looks: Looks, still: float, *, steps: int, loudest: float = np.inf, long: float = LONG
 ) -> list[GroupFit]:
     """Fit every group from where its poles stand, every second group along the frequency axis first.
 
@@ -186,11 +186,11 @@ def fit_groups(
     order = sorted(range(len(groups)), key=lambda g: float(poles.pole[groups[g]].imag.mean()))
     red = [groups[g] for g in order[0::2]]
     black = [groups[g] for g in order[1::2]]
-    fits = _fit_batches(batches(ring, poles, red, starts, looks, still), steps)
+    fits = _fit_batches(batches(ring, poles, red, starts, looks, still, long=long), steps)
     if black:
         now = successors(poles, fits, loudest, still)[0]
         beside = [np.concatenate([red[i], red[i + 1]]) if i + 1 < len(red) else red[i] for i in range(len(black))]
-        fits += _fit_batches(batches(ring, poles, black, starts, looks, still, (now, beside)), steps)
+        fits += _fit_batches(batches(ring, poles, black, starts, looks, still, (now, beside), long=long), steps)
     return fits
 
 

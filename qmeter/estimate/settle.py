@@ -7,7 +7,7 @@ fitted as one line). What does not stand out of its surroundings is dropped.
 
 from __future__ import annotations
 
-from dataclasses import dataclass, replace
+from dataclasses import dataclass, fields, replace
 
 import numpy as np
 
@@ -77,6 +77,11 @@ SHORTEST = 96
 """samples of ring below which nothing is fitted"""
 
 
+def _joined(one: Settled, other: Settled) -> Settled:
+    parts = [np.concatenate([getattr(one, f.name), getattr(other, f.name)]) for f in fields(Settled) if f.name != "poles"]
+    return Settled(one.poles.plus(other.poles), *parts)
+
+
 def settle(ring: Ring, poles: Poles, contact: int) -> Settled:
     """Final values of the candidates `poles`; `contact` is the sample at which the contact force has ended."""
     if len(ring.samples) < SHORTEST or not len(poles):
@@ -94,9 +99,20 @@ def settle(ring: Ring, poles: Poles, contact: int) -> Settled:
         state = _State.of(ring, state.poles.plus(new))
     for _ in range(2):
         state, settled = _sweep(ring, state, contact, careful=True, resolving=False)
-        if not len(state.poles):
-            return _nothing()
-    return settled.take(worthy(settled, ring) & ~steady(settled.poles, ring))
+    settled = settled.take(worthy(settled, ring))
+    clean = settled.excess < CROWDED
+    if len(settled.poles) and clean.all():
+        return settled.take(~steady(settled.poles, ring))
+    return _completed(ring, settled.take(clean), _from_crowd(crowd_modes(ring, unshattered(candidates), contact), ring))
+
+
+def _completed(ring: Ring, clean: Settled, crowd: Settled) -> Settled:
+    """The modes that reach the noise as they are, and of the crowd those that are not among them."""
+    keep = np.ones(len(crowd.poles), bool)
+    for i, s in enumerate(crowd.poles.pole):
+        keep[i] = not np.any(np.abs(s.imag - clean.poles.pole.imag) < np.maximum(-s.real, -clean.poles.pole.real))
+    both = _joined(clean, crowd.take(keep))
+    return both.take(~steady(both.poles, ring))
 
 
 def _from_crowd(crowd: Crowd, ring: Ring) -> Settled:
