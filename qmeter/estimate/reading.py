@@ -9,6 +9,8 @@ import numpy as np
 from qmeter.dsp.noise import FloatArray, NoiseSpectrum
 from qmeter.dsp.strikes import StrikeSpan
 from qmeter.estimate import doubts
+from qmeter.estimate.drift import Drift, find_drifts
+from qmeter.estimate.drifting import by_level, drift_mode, leftover
 from qmeter.estimate.find import Ring, find_modes
 from qmeter.estimate.groups import rest_of
 from qmeter.estimate.half_power import ModeRing
@@ -95,16 +97,32 @@ def _rung(what: Heard, span: StrikeSpan, settings: Settings) -> tuple[tuple[Mode
             if len(found) and is_driven(what, 0.5 * left):
                 return (), doubts.driven(what.growth_db, left)
             settled = _finite(settle(ring, found, contact))
+            drifts = find_drifts(ring, settled.poles, settled.start, contact=contact, candidates=found)
+            if drifts:
+                ring, settled = _without(ring, settled, drifts, contact)
             # a rough fit that explains all but 2 % has seen modes: if the careful one lost one of them, that is no sign of speech
-            left = unexplained(ring, settled.poles, contact) if left > _ROUGHLY_ALL else left
+            left = unexplained(ring, settled.poles, contact) if left > _ROUGHLY_ALL and not drifts else left
             if len(settled.poles) and is_driven(what, left):
                 return (), doubts.driven(what.growth_db, left)
-            if not len(settled.poles):
+            if not len(settled.poles) and not drifts:
                 return (), None
-            modes = _modes(ring, settled, settings, settled.model)
-            return _doubted(what, span, settled, modes), None
+            modes = _modes(ring, settled, settings, settled.model) if len(settled.poles) else []
+            straight = _doubted(replace(what, ring=ring), span, settled, modes) if modes else ()
+            return by_level([*straight, *(drift_mode(d, ring, settled.poles, settings.clock_ppm) for d in drifts)]), None
     except np.linalg.LinAlgError:
         return (), None
+
+
+def _without(ring: Ring, settled: Settled, drifts: tuple[Drift, ...], contact: int) -> tuple[Ring, Settled]:
+    """The ring less its drifting lines, and what else is in it, looked for anew: a line that runs hides its neighbours."""
+    count = len(ring.samples)
+    rest = ring.samples - np.sum([d.synthesise(count, ring.rate) for d in drifts], axis=0)
+    ring = replace(ring, samples=rest)
+    gone = np.array([i in {j for d in drifts for j in d.replaces} for i in range(len(settled.poles))], dtype=bool)
+    if not np.any(~gone) and not len(find_modes(ring, rounds=1)):
+        return ring, settled.take(~gone)
+    again = _finite(settle(ring, find_modes(ring), contact))
+    return ring, again.take(~leftover(again.poles, drifts, ring.rate))
 
 
 def _finite(s: Settled) -> Settled:
@@ -174,7 +192,7 @@ def _doubted(what: Heard, span: StrikeSpan, s: Settled, modes: list[Mode]) -> tu
     rings = _rings(ring, s)
     checked = cross_checked(own, rings)
     drawn = [replace(mode, trace=_trace(mode, r, s, i, what)) for i, (mode, r) in enumerate(zip(checked, rings, strict=True))]
-    return tuple(sorted(drawn, key=lambda mode: -mode.level_db))
+    return tuple(drawn)
 
 
 def _rings(ring: Ring, s: Settled) -> list[ModeRing | None]:
