@@ -19,6 +19,8 @@ _BAND_RATIO = 0.45
 _BAND_LEAST_HZ = 600.0
 _COARSE = 0.12
 """a band's sample longer than this many time constants cannot tell where in a mode's life the residual stands"""
+_LONGEST_S = 1.5
+"""the knock and what it brings are over by then: later the residual is taken to stand at its last level"""
 _BROAD_S = 0.5
 _CLEAR_WIDTHS = 1.5
 """half-power widths either side of a mode that its own misfit may fill"""
@@ -36,13 +38,19 @@ class BandProfile:
 
     def mean_between(self, from_s: FloatArray, to_s: FloatArray) -> FloatArray:
         """Mean ratio of residual to noise power between these times (arrays of one shape)."""
+        lo = np.maximum(from_s / self.step_s, 0.0)
+        hi = np.maximum(to_s / self.step_s, lo + 1.0)
+        return np.asarray((self._until(hi) - self._until(lo)) / (hi - lo))
+
+    def _until(self, place: FloatArray) -> FloatArray:
+        """Sum over the samples before `place`; beyond the end the level of the last quarter goes on."""
         last = len(self.cumulated) - 1
-        grid = np.arange(last + 1)
-        lo = np.clip(from_s / self.step_s, 0, last)
-        hi = np.clip(to_s / self.step_s, 0, last)
-        hi = np.maximum(hi, np.minimum(lo + 1.0, last))
-        lo = np.minimum(lo, hi - 1.0)
-        return np.asarray((np.interp(hi, grid, self.cumulated) - np.interp(lo, grid, self.cumulated)) / (hi - lo))
+        quarter = max(last // 4, 1)
+        level = (self.cumulated[-1] - self.cumulated[-1 - quarter]) / quarter
+        whole = np.minimum(place.astype(np.int64), last)
+        inside = np.minimum(place, last) - whole
+        upper = self.cumulated[np.minimum(whole + 1, last)]
+        return np.asarray(self.cumulated[whole] + inside * (upper - self.cumulated[whole]) + np.maximum(place - last, 0.0) * level)
 
 
 @dataclass(frozen=True, slots=True)
@@ -66,7 +74,7 @@ def profiles(ring: Ring, rest: FloatArray, poles: Poles) -> Profiles:
     Bins close to a mode are left out where enough others remain: what stands there is that mode's own misfit, and a misfit (an
     unresolved pair, say) must not be taken for a knock that lasts.
     """
-    n = fast_length(len(rest))
+    n = fast_length(min(len(rest), int(_LONGEST_S * ring.rate)))
     spectrum: ComplexArray = np.asarray(scipy.fft.rfft(rest[:n]))
     step = ring.rate / n
     hz = np.arange(len(spectrum)) * step

@@ -31,6 +31,8 @@ TURNS = 4
 """times the residual is searched anew for modes"""
 CROWDED = 4.0
 """chi2 over its expectation above which the misfit is other modes, not a knock that will be over: a late start would not help"""
+HEALTHY = 1.8
+"""chi2 over its expectation below which a group has nothing left to explain"""
 CROWD = 4
 """so many modes above CROWDED make a crowd, to be fitted all together"""
 EARLY, LATE = 0.5, 2.5
@@ -87,18 +89,23 @@ def settle(ring: Ring, poles: Poles, contact: int) -> Settled:
     if len(ring.samples) < SHORTEST or not len(poles):
         return _nothing()
     candidates = poles
-    state = _State.of(ring, _first_fit(ring, unshattered(poles), contact))
+    state = _State.of(ring, _first_fit(ring, unshattered(poles), contact), contact)
     for turn in range(TURNS):
         for _ in range(2):
             state = _sweep(ring, state, contact, careful=turn > 0, resolving=True)[0]
+            if len(state.excess) and np.max(state.excess) < HEALTHY:
+                break
         if np.count_nonzero(state.excess > CROWDED) >= CROWD:
             return _from_crowd(crowd_modes(ring, unshattered(candidates), contact), ring)
         new = _looked_again(ring, state, weak=turn > 0) if turn < TURNS - 1 else Poles.none()
         if not len(new):
             break
-        state = _State.of(ring, state.poles.plus(new))
+        state = _State.of(ring, state.poles.plus(new), contact)
     for _ in range(2):
+        known = state.excess
         state, settled = _sweep(ring, state, contact, careful=True, resolving=False)
+        if len(known) and np.max(known) < HEALTHY and len(state.poles) == len(known):
+            break
     settled = settled.take(worthy(settled, ring))
     clean = settled.excess < CROWDED
     if len(settled.poles) and clean.all():
@@ -137,11 +144,18 @@ class _State:
     rest: FloatArray
     table: Profiles
     excess: FloatArray
+    shift: int
 
     @staticmethod
-    def of(ring: Ring, poles: Poles, excess: FloatArray | None = None) -> _State:
+    def of(ring: Ring, poles: Poles, contact: int) -> _State:
         rest = rest_of(ring, poles)
-        return _State(poles, rest, profiles(ring, rest, poles), np.full(len(poles), np.inf) if excess is None else excess)
+        shift = onset_shift(ring, poles, rest, contact)
+        heard = rest
+        if shift:
+            # before the change point the model speaks and the ring does not yet: that is no residual of any fit
+            heard = rest.copy()
+            heard[:shift] = 0.0
+        return _State(poles, rest, profiles(ring, heard, poles), np.full(len(poles), np.inf), shift)
 
 
 def _limits(ring: Ring) -> tuple[float, float]:
@@ -167,13 +181,13 @@ def _sweep(ring: Ring, state: _State, contact: int, *, careful: bool, resolving:
     if not len(before):
         return state, _nothing()
     latest = np.full(len(before), EARLY) if resolving else np.where(state.excess < CROWDED, LATE, EARLY)
-    starts = choose_starts(ring, before, state.table, onset_shift(ring, before, state.rest, contact), latest)
+    starts = choose_starts(ring, before, state.table, state.shift, latest)
     looks = Looks(ring, state.rest)
     fits = fit_groups(ring, before, joint_groups(before, still), starts, looks, still, steps=6, loudest=loudest)
     if careful:
         fits = restarted(ring, before, fits, looks, still)
     poles, keep = moved(before, fits, loudest, still)
-    after = _State.of(ring, poles)
+    after = _State.of(ring, poles, contact)
     settled = collect(ring, before, poles, keep, fits, after.table)
     after = replace(after, excess=settled.excess)
     if not resolving:
@@ -184,12 +198,12 @@ def _sweep(ring: Ring, state: _State, contact: int, *, careful: bool, resolving:
     full = Poles(before.pole.copy(), before.amplitude.copy())
     full.pole[keep], full.amplitude[keep] = poles.pole, poles.amplitude
     if swaps:
-        trial = _State.of(ring, merged(swapped(full, stays, swaps)))
+        trial = _State.of(ring, merged(swapped(full, stays, swaps)), contact)
         late = int(np.median(starts))
         if np.sum(trial.rest[late:] ** 2) < 1.02 * np.sum(after.rest[late:] ** 2):
             return trial, settled
     plain = merged(full.take(stays))
-    return (_State.of(ring, plain) if len(plain) < len(poles) else after), settled
+    return (_State.of(ring, plain, contact) if len(plain) < len(poles) else after), settled
 
 
 def _looked_again(ring: Ring, state: _State, *, weak: bool) -> Poles:
