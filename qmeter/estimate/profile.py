@@ -105,12 +105,12 @@ def _clear_of(poles: Poles, bins: int, length: int) -> np.ndarray:
 def _band(spectrum: ComplexArray, root: FloatArray, clear: np.ndarray, lo: int, hi: int, duration_s: float, centre: float) -> BandProfile:
     size = scipy.fft.next_fast_len(hi - lo)
     band = np.zeros(size, complex)
-    band[: hi - lo] = spectrum[lo:hi] * root[lo:hi]
-    used = hi - lo
-    enough = int(np.count_nonzero(clear[lo:hi]))
-    if enough > _CLEAR_SHARE * used:
-        band[: hi - lo] *= clear[lo:hi]
-        used = enough
+    # tapered, so that what is loud for a moment (the contact) does not ring on in the band
+    taper = np.sin(np.pi * (np.arange(hi - lo) + 0.5) / (hi - lo))
+    if np.count_nonzero(clear[lo:hi]) > _CLEAR_SHARE * (hi - lo):
+        taper *= clear[lo:hi]
+    band[: hi - lo] = spectrum[lo:hi] * root[lo:hi] * taper
+    used = float(np.sum(taper**2))
     envelope = np.asarray(scipy.fft.ifft(band, overwrite_x=True))
     power = (envelope.real**2 + envelope.imag**2) * (size**2 / used)
     return BandProfile(centre, duration_s / size, np.concatenate([[0.0], np.cumsum(power)]))

@@ -303,12 +303,12 @@ def restarted(ring: Ring, poles: Poles, fits: list[GroupFit], looks: Looks, stil
                 sick.append((members, int(g.batch.start[r])))
     if not sick:
         return fits
-    for offset in range(1, 7):
+    for offset in range(1, 10):
         groups, starts = [], np.zeros(len(poles), np.int64)
         for members, start in sick:
             later = STARTS_S[STARTS_S * ring.rate > start + 1]
             fastest = float(np.max(-poles.pole[members].real)) * ring.rate
-            if len(later) >= offset and (later[offset - 1] - start / ring.rate) * fastest < 1.5:
+            if len(later) >= offset and (later[offset - 1] - start / ring.rate) * fastest < 2.5:
                 groups.append(members)
                 starts[members] = min(int(later[offset - 1] * ring.rate), len(ring.samples) // 2)
         if not groups:
