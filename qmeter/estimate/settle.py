@@ -31,6 +31,8 @@ TURNS = 4
 """times the residual is searched anew for modes"""
 CROWDED = 4.0
 """chi2 over its expectation above which the misfit is other modes, not a knock that will be over: a late start would not help"""
+PASSING = 30.0
+"""chi2 over its expectation that a knock at the start may leave in a fit that is trusted all the same"""
 HEALTHY = 1.8
 """chi2 over its expectation below which a group has nothing left to explain"""
 CROWD = 4
@@ -110,7 +112,23 @@ def settle(ring: Ring, poles: Poles, contact: int) -> Settled:
     clean = settled.excess < CROWDED
     if len(settled.poles) and clean.all():
         return settled.take(~steady(settled.poles, ring))
-    return _completed(ring, settled.take(clean), _from_crowd(crowd_modes(ring, unshattered(candidates), contact), ring))
+    crowd = _from_crowd(crowd_modes(ring, unshattered(candidates), contact), ring)
+    return _completed(ring, settled.take(clean | _better_than(settled, crowd)), crowd)
+
+
+def _better_than(settled: Settled, crowd: Settled) -> np.ndarray:
+    """(M,) settled modes that the crowd's fit knows too, agrees with, and knows less well (a knock passes, and a late start escapes it)."""
+    out = np.zeros(len(settled.poles), bool)
+    if not len(crowd.poles):
+        return out
+    for i, s in enumerate(settled.poles.pole):
+        j = int(np.argmin(np.abs(crowd.poles.pole.imag - s.imag)))
+        theirs = crowd.covariance[j] + crowd.model[j]
+        off = np.array([crowd.poles.pole[j].real - s.real, crowd.poles.pole[j].imag - s.imag])
+        mine = settled.covariance[i]
+        near = bool(np.all(off**2 < 9.0 * (np.diagonal(theirs) + np.diagonal(mine))))
+        out[i] = near and mine[0, 0] < theirs[0, 0] and settled.excess[i] < PASSING
+    return out
 
 
 def _completed(ring: Ring, clean: Settled, crowd: Settled) -> Settled:
