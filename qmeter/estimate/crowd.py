@@ -12,7 +12,7 @@ import numpy as np
 
 from qmeter.dsp.band import ring_sum
 from qmeter.estimate.find import Poles, Ring, find_modes
-from qmeter.estimate.joint import JointFit, joint_fit
+from qmeter.estimate.joint import JointFit, fitted_amplitudes, joint_fit
 from qmeter.estimate.ladder import Rungs, rungs_of, summary
 from qmeter.estimate.poles import FloatArray
 
@@ -119,4 +119,5 @@ def _ladder(ring: Ring, poles: Poles, start: int, length: int) -> Crowd:
             continue
         mean, fit_part[i], model_part[i] = summary(np.array(rungs.values[i]), np.array(rungs.covariances[i]))
         pole[i] = -mean[0] + 1j * mean[1]
-    return Crowd(Poles(pole, poles.amplitude), fit_part, model_part, rungs.held(), start, length)
+    settled = fitted_amplitudes(ring, Poles(pole, poles.amplitude), start, length)
+    return Crowd(settled, fit_part, model_part, rungs.held(), start, length)

@@ -79,6 +79,21 @@ def joint_fit(ring: Ring, poles: Poles, start: int, length: int, *, steps: int) 
     return JointFit(Poles(s, c * np.exp(-s * start)), _covariance(hessian, s, columns, rest * root), cost)
 
 
+def fitted_amplitudes(ring: Ring, poles: Poles, start: int, length: int) -> Poles:
+    """The same poles with the amplitudes that fit this stretch best (linear; two rounds, as far skirts stand outside the windows)."""
+    n = fast_length(min(length, len(ring.samples) - start))
+    data = ring.samples[start : start + n]
+    s, c = poles.pole, poles.amplitude * np.exp(poles.pole * start)
+    pick = np.sort(np.concatenate([4 * np.arange(len(s)), 4 * np.arange(len(s)) + 1]))
+    for _ in range(2):
+        rest = spectrum_of(data - ring_sum(s, c, 0, n), n)
+        root = 1.0 / np.sqrt(residual_level(ring, rest, n))
+        hessian, gradient = _normal(_all_columns(s, c, root, n), rest, root)
+        step = _solve(hessian[np.ix_(pick, pick)], gradient[pick], 1e-6).reshape(-1, 2)
+        c = c + step[:, 0] + 1j * step[:, 1]
+    return Poles(s, c * np.exp(-s * start))
+
+
 def residual_level(ring: Ring, rest: ComplexArray, n: int) -> FloatArray:
     """Expected |residual|^2 of each bin: running block medians of the residual itself, never below the noise."""
     power = rest.real**2 + rest.imag**2

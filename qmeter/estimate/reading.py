@@ -101,7 +101,7 @@ def _rung(what: Heard, span: StrikeSpan, settings: Settings) -> tuple[tuple[Mode
             if drifts:
                 ring, settled = _without(ring, settled, drifts, contact)
             # a rough fit that explains all but 2 % has seen modes: if the careful one lost one of them, that is no sign of speech
-            left = unexplained(ring, settled.poles, contact) if left > _ROUGHLY_ALL and not drifts else left
+            left = min(left, unexplained(ring, settled.poles, contact)) if left > _ROUGHLY_ALL and not drifts else left
             if len(settled.poles) and is_driven(what, left):
                 return (), doubts.driven(what.growth_db, left)
             if not len(settled.poles) and not drifts:
