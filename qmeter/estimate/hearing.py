@@ -24,9 +24,10 @@ _HEARD_S = 0.3
 """speech is judged over its first syllable"""
 _WINDOW_S = 0.008
 _GROWTH_S = 0.4
-DRIVEN = ((0.3, 0.95), (1.0, 0.5), (2.0, 0.15), (6.0, 0.05))
-"""growth in dB, and the share of the energy that modes leave: a sound with more of both is no ring. Most speech-like bursts grow by 1 to
-25 dB and leave 0.2 or more; struck rings that grow by 2 dB or more left below 0.02, crowded ones that leave 0.2 grew by 0.6 dB at most"""
+_SLOW_S = 0.6
+DRIVEN = ((0.3, 0.95), (1.0, 0.06), (4.0, 0.03))
+"""growth in dB, and the share of the energy that the rough fit's modes leave: a sound with more of both is no ring. Speech-like bursts
+mostly grow by 1 to 25 dB and leave 0.04 or more; struck rings that grow by 1 dB or more left below 0.02"""
 
 
 @dataclass(frozen=True, slots=True)
@@ -39,6 +40,8 @@ class Heard:
     noise_rms: float
     growth_db: float
     """from the onset on, whether or not the ring starts later"""
+    dies_slowly: bool
+    """it takes more than 0.6 s to fall by 20 dB, and falls all the while"""
 
 
 def heard(samples: FloatArray, rate: float, span: StrikeSpan, quantum: float) -> Heard:
@@ -58,7 +61,8 @@ def heard(samples: FloatArray, rate: float, span: StrikeSpan, quantum: float) ->
     quiet = samples[span.quiet_from : span.quiet_to]
     noise, offset, rms = _noise(quiet, piece, rate, quantum)
     grows = growth_db(samples[span.onset : span.end] - offset, rate, noise_power(noise, rate))
-    return Heard(Ring(piece - offset, rate, noise, LOWEST_HZ, HIGHEST_OF_RATE * rate), first, contact, rms, grows)
+    slow = dies_slowly(samples[span.onset : span.end] - offset, rate)
+    return Heard(Ring(piece - offset, rate, noise, LOWEST_HZ, HIGHEST_OF_RATE * rate), first, contact, rms, grows, slow)
 
 
 def step_of(samples: FloatArray, bits: int | None = None) -> float:
@@ -127,6 +131,25 @@ def growth_db(samples: FloatArray, rate: float, noise: float) -> float:
     return float(10.0 * np.log10((power.max() + least) / (power[:2].max() + least)))
 
 
+def dies_slowly(samples: FloatArray, rate: float) -> bool:
+    """Whether the sound takes more than `_SLOW_S` after its peak to fall by 20 dB, and has fallen by 5 dB half-way there.
+
+    A syllable is over sooner, or holds its level. A thin struck sheet, whose modes are too many to tell apart, does neither.
+    """
+    width = max(int(0.02 * rate), 2)
+    blocks = len(samples) // width
+    if blocks < 8:
+        return False
+    power = np.mean(samples[: blocks * width].reshape(blocks, width) ** 2, axis=1)
+    top = int(np.argmax(power[: max(int(_GROWTH_S / 0.02), 1)]))
+    below = np.flatnonzero(power[top:] < 0.01 * power[top])
+    lasts = int(below[0]) if len(below) else blocks - top
+    if lasts * 0.02 < _SLOW_S:
+        return False
+    middle = power[top + lasts // 2 : top + lasts // 2 + 5]
+    return bool(np.mean(middle) < 10.0**-0.5 * power[top])
+
+
 def unexplained(ring: Ring, poles: Poles, contact: int) -> float:
     """Share of the energy of the first 0.3 s after the contact that these modes leave, the noise's own taken off; 0 where all is noise."""
     stop = min(int(_HEARD_S * ring.rate), len(ring.samples))
@@ -144,4 +167,4 @@ def is_driven(what: Heard, share: float) -> bool:
     `share`: what the modes leave unexplained. A struck thing may grow, too (beats, a low mode that starts near zero, a graze before
     the tap), but then its modes account for it.
     """
-    return any(what.growth_db > grows and share > left for grows, left in DRIVEN)
+    return not what.dies_slowly and any(what.growth_db > grows and share > left for grows, left in DRIVEN)

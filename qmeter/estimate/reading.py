@@ -94,16 +94,12 @@ def _rung(what: Heard, span: StrikeSpan, settings: Settings) -> tuple[tuple[Mode
             found = find_modes(ring)
             # the rough fit says it of most speech, whose forest of harmonics would take long to settle
             left = unexplained(ring, found, contact)
-            if len(found) and is_driven(what, 0.5 * left):
+            if len(found) and is_driven(what, left):
                 return (), doubts.driven(what.growth_db, left)
             settled = _finite(settle(ring, found, contact))
             drifts = find_drifts(ring, settled.poles, settled.start, contact=contact, candidates=found)
             if drifts:
                 ring, settled = _without(ring, settled, drifts, contact)
-            # a rough fit that explains all but 2 % has seen modes: if the careful one lost one of them, that is no sign of speech
-            left = min(left, unexplained(ring, settled.poles, contact)) if left > _ROUGHLY_ALL and not drifts else left
-            if len(settled.poles) and is_driven(what, left):
-                return (), doubts.driven(what.growth_db, left)
             if not len(settled.poles) and not drifts:
                 return (), None
             modes = _modes(ring, settled, settings, settled.model) if len(settled.poles) else []
