@@ -17,6 +17,8 @@ from qmeter.estimate.ladder import Rungs, rungs_of, summary
 from qmeter.estimate.poles import FloatArray
 
 TURNS = 4
+MOST = 120
+"""modes fitted together at most"""
 LONGEST_S, SHORTEST_S = 1.5, 0.25
 LEAST_ENERGY = 30.0
 """rho^2 = 4 a^2 / u(a)^2 of a mode against the residual around it"""
@@ -41,6 +43,7 @@ class Crowd:
 
 def crowd_modes(ring: Ring, poles: Poles, contact: int) -> Crowd:
     """All modes of a crowded ring, from the candidates `poles`."""
+    poles = _loudest(poles)
     start = min(contact, len(ring.samples) // 4)
     length = _length_for(ring, poles, start)
     loudest = float(np.max(np.abs(ring.samples)))
@@ -50,12 +53,20 @@ def crowd_modes(ring: Ring, poles: Poles, contact: int) -> Crowd:
         if turn == TURNS - 1 or not len(kept):
             break
         new = _new_modes(ring, kept)
-        poles = kept.plus(new)
+        poles = _loudest(kept.plus(new))
         fit = joint_fit(ring, poles, start, length, steps=8)
     if not len(kept):
         none = np.zeros((0, 2, 2))
         return Crowd(Poles.none(), none, none, np.zeros(0), start, length)
     return _ladder(ring, kept, start, length)
+
+
+def _loudest(poles: Poles) -> Poles:
+    """The `MOST` of greatest energy: beyond, a cymbal's forest would take minutes and its modes could not be told apart anyway."""
+    if len(poles) <= MOST:
+        return poles
+    energy = np.abs(poles.amplitude) ** 2 / -poles.pole.real
+    return poles.take(np.sort(np.argsort(-energy)[:MOST]))
 
 
 def _length_for(ring: Ring, poles: Poles, start: int) -> int:

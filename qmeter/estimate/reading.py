@@ -24,7 +24,7 @@ _DB_PER_NEPER = 8.685889638
 _TRACE_POINTS = 240
 _HEARD_DB = 20.0
 """and set aside when one this near to the strongest of a longer strike cannot be told in it"""
-_ROUGHLY_ALL = 0.02
+
 """share of the energy; speech leaves three times as much and more"""
 _FALLEN_DB = 20.0
 """a strike that has fallen by less when it is cut off is set aside where others are good"""

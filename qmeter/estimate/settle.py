@@ -149,7 +149,7 @@ def _from_crowd(crowd: Crowd, ring: Ring) -> Settled:
     settled = Settled(crowd.poles, fit, fit, np.full(m, crowd.start), np.full(m, crowd.length), excess, whole, model)
     with np.errstate(all="ignore"):
         relative = np.sqrt(fit[:, 0, 0] + model[:, 0, 0]) / -crowd.poles.pole.real
-    keep = (crowd.held >= 0.6) & (relative < 0.4) & ~steady(crowd.poles, ring)
+    keep = (crowd.held >= 0.6) & (relative < 0.2) & ~steady(crowd.poles, ring)
     hz = crowd.poles.pole.imag * ring.rate / (2 * np.pi)
     return settled.take(keep & (hz > ring.low_hz) & (hz < ring.high_hz))
 
@@ -254,7 +254,8 @@ def unshattered(poles: Poles) -> Poles:
     for i in np.argsort(-energy):
         s, strong = poles.pole[i], poles.pole[kept]
         decays = s.real / strong.real
-        splinter = (np.abs(s.imag - strong.imag) < SPLINTER_WIDTHS * 2.0 * -strong.real) & (decays > 0.3) & (decays < 8.0)
+        like = (decays > 0.3) | (energy[i] < 0.01 * energy[kept])
+        splinter = (np.abs(s.imag - strong.imag) < SPLINTER_WIDTHS * 2.0 * -strong.real) & like & (decays < 8.0)
         if not np.any(splinter):
             kept.append(int(i))
     return poles.take(np.sort(np.array(kept, dtype=int)))
