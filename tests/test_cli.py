@@ -54,10 +54,10 @@ if __name__ == "__main__":
 
 
 def write_wav(path: Path, frames: int = 800) -> Path:
-    """A short 16-bit file that can be read; what is in it does not matter here."""
+    """A short 16-bit file that can be read; what is in it does not matter here, but that it differs from name to name."""
     with wave.open(str(path), "wb") as out:
         out.setparams((1, 2, 8000, frames, "NONE", ""))
-        out.writeframes(struct.pack(f"<{frames}h", *(n % 100 for n in range(frames))))
+        out.writeframes(struct.pack(f"<{frames}h", *((n + sum(path.name.encode())) % 100 for n in range(frames))))
     return path
 
 
@@ -74,7 +74,7 @@ def hand_made(monkeypatch: pytest.MonkeyPatch) -> list[Settings]:
         if name.startswith("memory"):
             raise MemoryError
         made = fakes.silence() if name.startswith("quiet") else fakes.bar() if name.startswith("bar") else fakes.plate()
-        return replace(made, file=None)
+        return replace(made, file=None, sha256=recording.origin.sha256 if recording.origin else None)
 
     monkeypatch.setattr("qmeter.estimate.measure.measure", measure, raising=False)
     return asked
@@ -284,6 +284,18 @@ def test_pool(folder: Path, hand_made: list[Settings], capsys: pytest.CaptureFix
     assert result["pooled"]["mountings"] == [None]
     assert main(["replay", "lost.wav", "--pool", "--json"]) == 4
     assert "pooled" not in json.loads(capsys.readouterr().out)
+
+
+def test_a_file_given_twice_is_pooled_once(folder: Path, hand_made: list[Settings], capsys: pytest.CaptureFixture[str]) -> None:
+    """The same bytes under any name are no second strike: u95 would be smaller than it is. It is said, and the file still measured."""
+    (folder / "again.wav").write_bytes((folder / "hung-1.wav").read_bytes())
+    for files in (["hung-1.wav", "hung-1.wav", "foam-1.wav"], ["hung-1.wav", "again.wav", "foam-1.wav"]):
+        assert main(["replay", *files, "--pool", "--json"]) == 0
+        out, err = capsys.readouterr()
+        result = json.loads(out)
+        assert result["pooled"]["files"] == ["hung-1.wav", "foam-1.wav"]
+        assert len(result["recordings"]) == 3
+        assert f"{files[1]} holds the same bytes as hung-1.wav" in err
 
 
 def test_mountings_by_name_by_path_and_by_pattern() -> None:

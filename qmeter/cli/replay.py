@@ -20,6 +20,7 @@ if TYPE_CHECKING:
 
     from qmeter.cli.batch import Job, Outcome
     from qmeter.cli.output import Output
+    from qmeter.estimate.modes import Measurement
     from qmeter.show.document import Pooled
 
 HELP = """Measure saved recordings of struck objects.
@@ -144,9 +145,22 @@ def _pooled(outcomes: Sequence[Outcome], clock_ppm: float) -> Pooled | None:
     from qmeter.estimate.pool import pool_measurements
     from qmeter.show.document import Pooled
 
-    measured = [outcome.measurement for outcome in outcomes if outcome.measurement is not None]
+    measured = _each_once([outcome.measurement for outcome in outcomes if outcome.measurement is not None])
     if not measured:
         return None
     named = [measurement.mounting for measurement in measured]
     modes, doubts = pool_measurements(measured, [name for name in named if name is not None] or None, clock_ppm=clock_ppm)
     return Pooled(tuple(measurement.file or "" for measurement in measured), tuple(named), tuple(modes), tuple(doubts))
+
+
+def _each_once(measurements: Sequence[Measurement]) -> list[Measurement]:
+    """Without the files that hold the same bytes as an earlier one: a strike counted twice would make u95 smaller than it is."""
+    first: dict[str, Measurement] = {}
+    kept = []
+    for measurement in measurements:
+        same = first.setdefault(measurement.sha256, measurement) if measurement.sha256 is not None else measurement
+        if same is measurement:
+            kept.append(measurement)
+        else:
+            say(f"{measurement.file} holds the same bytes as {same.file}, so it is pooled once. Give every strike a recording of its own.")
+    return kept
