@@ -77,7 +77,7 @@ def noise_spectrum(quiet: FloatArray, rate: float, *, quantum: float = 0.0) -> N
     window = 0.5 - 0.5 * np.cos(2 * np.pi * np.arange(n) / n)
     lowest = min(max(int(_LOWEST_HZ * n / rate), 1), n // 4)
     spectrum = scipy.fft.rfft(x * window)[lowest:]
-    frequency = np.arange(lowest, n // 2 + 1) * (rate / n)
+    frequency: FloatArray = np.arange(lowest, n // 2 + 1, dtype=np.float64) * (rate / n)
     floor = max(quantum**2 / 6.0 / rate, 1e-32)
     power = np.maximum(np.abs(spectrum) ** 2 * (2.0 / (rate * np.sum(window**2))), floor * 1e-3)
     fine = _fine_edges(len(power))
@@ -205,4 +205,4 @@ def _refined(power: FloatArray, peaks: NDArray[np.int64], first_bin: int, step_h
     at = np.clip(peaks, 1, len(power) - 2)
     left, mid, right = (np.log(power[at + d]) for d in (-1, 0, 1))
     shift = 0.5 * (left - right) / np.minimum(left - 2 * mid + right, -1e-9)
-    return (at + first_bin + np.clip(shift, -0.5, 0.5)) * step_hz
+    return np.asarray((at + first_bin + np.clip(shift, -0.5, 0.5)) * step_hz)

@@ -29,9 +29,13 @@ RUNGS = (
 )
 """(start after the end of contact in s, share of the full length)"""
 
+
 @dataclass(frozen=True, slots=True)
 class Crowd:
-    """Modes with the two parts of their covariance, each (M, 2, 2) of (alpha, omega) per sample; `steady` (M,) share of rungs it held in."""
+    """Modes with the two parts of their covariance, each (M, 2, 2) of (alpha, omega) per sample.
+
+    held: (M,) share of the rungs that a mode held in. start, length: samples of the full fit.
+    """
 
     poles: Poles
     fit: FloatArray
@@ -118,17 +122,17 @@ def _ladder(ring: Ring, poles: Poles, start: int, length: int) -> Crowd:
         ran |= np.abs(fit.poles.pole.imag - poles.pole.imag[alive]) > 2.0 * decay
         told = 4 * fit.poles.pole.real**2 > 16.0 * fit.covariance[:, 0, 0]
         good = ought & ~ran & told & np.isfinite(fit.covariance[:, 0, 0])
-        for j, i in enumerate(alive):
+        for j, i in enumerate(alive.tolist()):
             asked[i] += ought[j]
             if good[j]:
                 values[i].append(np.array([-fit.poles.pole[j].real, fit.poles.pole[j].imag]))
                 covariances[i].append(fit.covariance[j])
     rungs = Rungs(values, covariances, asked).plus(rungs_of(ring, poles, start, 1e-9))
     pole, fit_part, model_part = poles.pole.copy(), np.full((m, 2, 2), np.inf), np.full((m, 2, 2), np.inf)
-    for i in range(m):
-        if len(rungs.values[i]) < 2:
+    for k in range(m):
+        if len(rungs.values[k]) < 2:
             continue
-        mean, fit_part[i], model_part[i] = summary(np.array(rungs.values[i]), np.array(rungs.covariances[i]))
-        pole[i] = -mean[0] + 1j * mean[1]
+        mean, fit_part[k], model_part[k] = summary(np.array(rungs.values[k]), np.array(rungs.covariances[k]))
+        pole[k] = -mean[0] + 1j * mean[1]
     settled = fitted_amplitudes(ring, Poles(pole, poles.amplitude), start, length)
     return Crowd(settled, fit_part, model_part, rungs.held(), start, length)

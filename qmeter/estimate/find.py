@@ -10,6 +10,7 @@ from __future__ import annotations
 from dataclasses import dataclass
 
 import numpy as np
+from numpy.typing import NDArray
 
 from qmeter.dsp.band import bins_around, hann_bins, ring_sum, spectrum_of
 from qmeter.dsp.noise import FloatArray, NoiseSpectrum, fast_length
@@ -28,6 +29,10 @@ _BURST_S = (0.008, 0.002, 0.0006)
 """looks with unweighted bins: what is over within a few milliseconds is mostly gone under a Hann window's soft start"""
 _BURST_PEAKS = 6
 _MOST_PEAKS = 96
+
+
+Pick = NDArray[np.bool_] | NDArray[np.int64]
+"""which modes: a mask or indices"""
 
 
 @dataclass(frozen=True, slots=True)
@@ -51,20 +56,23 @@ class Poles:
     def __len__(self) -> int:
         return len(self.pole)
 
-    def take(self, which: object) -> Poles:
+    def take(self, which: Pick) -> Poles:
+        """Some of them."""
         return Poles(self.pole[which], self.amplitude[which])
 
     def plus(self, other: Poles) -> Poles:
+        """These and those."""
         return Poles(np.concatenate([self.pole, other.pole]), np.concatenate([self.amplitude, other.amplitude]))
 
     @staticmethod
     def none() -> Poles:
+        """No mode at all."""
         return Poles(np.zeros(0, complex), np.zeros(0, complex))
 
 
 def look_lengths(frames: int, rate: float) -> list[int]:
     """Lengths of the looks, from the whole ring down by factors of four to `_SHORTEST_S`."""
-    lengths = []
+    lengths: list[int] = []
     n = frames
     while n > _SHORTEST_S * rate or not lengths:
         lengths.append(fast_length(n))
@@ -140,7 +148,7 @@ def _first_guess(hann: ComplexArray, peaks: np.ndarray, length: int) -> ComplexA
     s = 2j * np.pi * k / length - x
     decay = np.clip(-s.real * length, 0.2, 14.0) / length
     omega = np.clip(s.imag, 2 * np.pi * (peaks - 1) / length, 2 * np.pi * (peaks + 1) / length)
-    return -decay + 1j * omega
+    return np.asarray(-decay + 1j * omega)
 
 
 def _first_guess_plain(bins: ComplexArray, peaks: np.ndarray, length: int) -> ComplexArray:
@@ -156,7 +164,15 @@ def _first_guess_plain(bins: ComplexArray, peaks: np.ndarray, length: int) -> Co
 
 
 def _fit_peaks(
-    ring: Ring, hann_or_plain: ComplexArray, floor: FloatArray, peaks: np.ndarray, start: ComplexArray, length: int, *, longest: bool, hann: bool
+    ring: Ring,
+    hann_or_plain: ComplexArray,
+    floor: FloatArray,
+    peaks: np.ndarray,
+    start: ComplexArray,
+    length: int,
+    *,
+    longest: bool,
+    hann: bool,
 ) -> Poles:
     out = Poles.none()
     for members in _neighbours(peaks):
@@ -173,7 +189,10 @@ def _fit_peaks(
             hann=hann,
         )
         fit = fit_rows(
-            data, start[rows], steps=6 if m == 1 else 10, decay_bounds=(np.full(rows.shape, 0.02 / length), np.full(rows.shape, 40.0 / length))
+            data,
+            start[rows],
+            steps=6 if m == 1 else 10,
+            decay_bounds=(np.full(rows.shape, 0.02 / length), np.full(rows.shape, 40.0 / length)),
         )
         ok = _plausible(fit.pole, fit.amplitude, peaks[rows], level, length, longest=longest, most_decays=14.0 if hann else 25.0)
         out = out.plus(Poles(fit.pole[ok], fit.amplitude[ok]))
@@ -187,7 +206,11 @@ def _plausible(
     moved = np.abs(pole.imag * length / (2 * np.pi) - peaks)
     energy = (np.abs(amplitude) / 2 * (1 - np.exp(-decays)) / (decays / length)) ** 2 * HANN_POWER
     return np.asarray(
-        (decays < most_decays) & (decays > (0.0 if longest else 0.3)) & (moved < 2.0 + decays / np.pi) & (energy > 0.3 * level[:, None]) & (amplitude != 0)
+        (decays < most_decays)
+        & (decays > (0.0 if longest else 0.3))
+        & (moved < 2.0 + decays / np.pi)
+        & (energy > 0.3 * level[:, None])
+        & (amplitude != 0)
     )
 
 

@@ -75,7 +75,7 @@ class Looks:
     def __init__(self, ring: Ring, rest: FloatArray) -> None:
         self._ring, self._rest = ring, rest
         self._spectra: dict[tuple[int, int], ComplexArray] = {}
-        self._lengths = [n for n in _halvings(len(rest))]
+        self._lengths = list(_halvings(len(rest)))
 
     def length_for(self, wanted: float, start: int) -> int:
         """The shortest shared length that covers `wanted` samples from `start` (or the longest there is)."""
@@ -102,7 +102,15 @@ def _halvings(frames: int) -> list[int]:
 
 
 def batches(
-    ring: Ring, poles: Poles, groups: list[IntArray], starts: IntArray, looks: Looks, still: float, changed: tuple[Poles, list[IntArray]] | None = None, *, long: float = LONG
+    ring: Ring,
+    poles: Poles,
+    groups: list[IntArray],
+    starts: IntArray,
+    looks: Looks,
+    still: float,
+    changed: tuple[Poles, list[IntArray]] | None = None,
+    *,
+    long: float = LONG,
 ) -> list[Batch]:
     """The rows that fit `groups`: what is left of the ring around each, with the group's own modes put back.
 
@@ -119,17 +127,17 @@ def batches(
     out = []
     for (_, bins), items in shapes.items():
         members = np.array([i[0] for i in items])
-        start, length, first = (np.array([i[j] for i in items]) for j in (1, 2, 3))
+        at, lengths, firsts = (np.array([i[j] for i in items], dtype=np.int64) for j in (1, 2, 3))
         data = np.empty((len(items), bins), complex)
         for r, (_, t0, n, k0, number) in enumerate(items):
             data[r] = bins_around(looks.spectrum(t0, n), np.array([k0]), bins)[0]
             if changed is not None and len(changed[1][number]):
                 beside, place = changed[1][number][None, :], (np.array([t0]), np.array([k0]), np.array([n]))
                 data[r] += own_bins(poles, beside, *place, bins)[0] - own_bins(changed[0], beside, *place, bins)[0]
-        data += own_bins(poles, members, start, first, length, bins)
-        centre = (first[:, None] + np.arange(bins)) * (ring.rate / length[:, None])
-        weight = 2.0 / (ring.noise.at(np.abs(centre)) * (length * ring.rate)[:, None])
-        out.append(Batch(members, start, BinRows(data, weight, first, length), poles.pole[members]))
+        data += own_bins(poles, members, at, firsts, lengths, bins)
+        centre = (firsts[:, None] + np.arange(bins)) * (ring.rate / lengths[:, None])
+        weight = 2.0 / (ring.noise.at(np.abs(centre)) * (lengths * ring.rate)[:, None])
+        out.append(Batch(members, at, BinRows(data, weight, firsts, lengths), poles.pole[members]))
     return out
 
 
@@ -158,7 +166,7 @@ def _bins_for(s: ComplexArray, length: int) -> tuple[int, int]:
     need = int(np.ceil(high - low)) + 1
     bins = next((b for b in BIN_SIZES if b >= need), BIN_SIZES[-1])
     bins = max(min(bins, length // 2 - 1), 4)
-    first = int(round((low + high) / 2 - bins / 2))
+    first = round((low + high) / 2 - bins / 2)
     return int(np.clip(first, 1, max(length // 2 - bins, 1))), bins
 
 
@@ -176,7 +184,16 @@ class GroupFit:
 
 
 def fit_groups(
-    ring: Ring, poles: Poles, groups: list[IntArray], starts: IntArray, looks: Looks, still: float, *, steps: int, loudest: float = np.inf, long: float = LONG
+    ring: Ring,
+    poles: Poles,
+    groups: list[IntArray],
+    starts: IntArray,
+    looks: Looks,
+    still: float,
+    *,
+    steps: int,
+    loudest: float = np.inf,
+    long: float = LONG,
 ) -> list[GroupFit]:
     """Fit every group from where its poles stand, every second group along the frequency axis first.
 

@@ -68,13 +68,17 @@ def _on_grid(starts: FloatArray, contact: int, last: int) -> IntArray:
     return np.asarray(np.minimum(contact + np.round(grid), last), dtype=np.int64)
 
 
-def _gather(poles: Poles, g: GroupFit, values: tuple[list[FloatArray], ...], covariances: tuple[list[FloatArray], ...], asked: IntArray) -> None:
+def _gather(
+    poles: Poles, g: GroupFit, values: tuple[list[FloatArray], ...], covariances: tuple[list[FloatArray], ...], asked: IntArray
+) -> None:
     for r in range(len(g.batch.members)):
         factor = _raised(g, r)
         for j, i in enumerate(g.batch.members[r]):
             asked[i] += 1
             s, was = g.fit.pole[r, j], poles.pole[i]
-            block = g.fit.covariance[r, 2 * j : 2 * j + 2, 2 * j : 2 * j + 2] * np.outer(factor[2 * j : 2 * j + 2], factor[2 * j : 2 * j + 2])
+            block = g.fit.covariance[r, 2 * j : 2 * j + 2, 2 * j : 2 * j + 2] * np.outer(
+                factor[2 * j : 2 * j + 2], factor[2 * j : 2 * j + 2]
+            )
             if not np.isfinite(block).all() or block[0, 0] <= 0 or s.real >= 0:
                 continue
             if abs(np.log(s.real / was.real)) > np.log(_LEASH_DECAYS) or abs(s.imag - was.imag) > _LEASH_WIDTHS * 2.0 * -was.real:
@@ -95,7 +99,7 @@ def _raised(g: GroupFit, r: int) -> FloatArray:
     smooth = 0.25 * np.roll(power, 1) + 0.5 * power + 0.25 * np.roll(power, -1)
     with np.errstate(all="ignore"):
         factor = weight @ smooth / np.sum(weight, axis=-1)
-    return np.sqrt(np.maximum(np.nan_to_num(factor, nan=np.inf), 1.0))
+    return np.asarray(np.sqrt(np.maximum(np.nan_to_num(factor, nan=np.inf), 1.0)))
 
 
 def summary(values: FloatArray, covariances: FloatArray) -> tuple[FloatArray, FloatArray, FloatArray]:

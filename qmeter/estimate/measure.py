@@ -140,7 +140,7 @@ def _rise(samples: FloatArray, rate: float) -> float:
 
 
 def _merit(measurement: Measurement) -> tuple[float, float]:
-    """How well a channel decays: decibels over the noise at the start, over all its modes; between channels where nothing rang, the strikes."""
+    """How well a channel decays: decibels over the noise at the onset, over all its modes; where nothing rang, the strikes."""
     return sum(max(mode.snr_db, 0.0) for mode in measurement.modes), len(measurement.strikes)
 
 

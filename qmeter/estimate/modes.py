@@ -38,11 +38,7 @@ class Spread:
 
     def along(self, per_hz: float, per_decay: float) -> float:
         """Standard uncertainty of a quantity with these two partial derivatives (GUM 5.2.2, eq. 13)."""
-        variance = (
-            per_hz**2 * self.frequency_variance
-            + per_decay**2 * self.decay_variance
-            + 2.0 * per_hz * per_decay * self.covariance
-        )
+        variance = per_hz**2 * self.frequency_variance + per_decay**2 * self.decay_variance + 2.0 * per_hz * per_decay * self.covariance
         return math.sqrt(max(variance, 0.0))
 
 

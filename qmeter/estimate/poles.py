@@ -215,7 +215,7 @@ def _finish(state: _State, pole: ComplexArray, root: FloatArray) -> RowFit:
     covariance is half the inverse of the real normal matrix.
     """
     jac, amp = _real(state.jacobian(pole)), _real(state.amp)
-    r, p, k2 = jac.shape
+    r, p, _k2 = jac.shape
     cross = amp @ jac.transpose(0, 2, 1)
     free = jac - cross.transpose(0, 2, 1) @ _solve(amp @ amp.transpose(0, 2, 1), amp)
     schur = free @ free.transpose(0, 2, 1)
@@ -223,6 +223,6 @@ def _finish(state: _State, pole: ComplexArray, root: FloatArray) -> RowFit:
     scale = np.ones((r, p))
     scale[:, 0::2] = -pole.real
     covariance = 0.5 * inverse * scale[:, :, None] * scale[:, None, :]
-    influence = np.ascontiguousarray(scale[:, :, None] * (inverse @ free)).view(complex) * root[:, None, :]
+    influence = np.ascontiguousarray(scale[:, :, None] * (inverse @ free)).view(np.complex128) * root[:, None, :]
     residual = state.res / root
     return RowFit(pole, state.c, covariance, state.chi2, residual, influence)

@@ -80,7 +80,7 @@ def profiles(ring: Ring, rest: FloatArray, poles: Poles) -> Profiles:
     hz = np.arange(len(spectrum)) * step
     root = 1.0 / np.sqrt(ring.noise.at(np.maximum(hz, step)) * (n * ring.rate / 2.0))
     clear = _clear_of(poles, len(spectrum), n)
-    bands = []
+    bands: list[BandProfile] = []
     centre = 150.0
     while centre < ring.rate / 2:
         half = max(_BAND_RATIO * centre, _BAND_LEAST_HZ / 2)

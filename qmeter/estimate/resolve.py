@@ -69,11 +69,11 @@ def pencil_poles(envelope: ComplexArray, orders: tuple[int, ...]) -> list[Comple
     columns = n // 2
     hankel = np.lib.stride_tricks.sliding_window_view(envelope, columns)
     _, _, vh = np.linalg.svd(hankel, full_matrices=False)
-    out = []
+    out: list[ComplexArray] = []
     for p in orders:
         v = vh[:p].T
         z = np.linalg.eigvals(np.linalg.lstsq(v[:-1], v[1:], rcond=None)[0])
-        out.append(z)
+        out.append(z.astype(np.complex128))
     return out
 
 
@@ -81,14 +81,14 @@ def proposals(suspect: Suspect) -> dict[int, ComplexArray]:
     """Start poles per sample, for each order that gives as many decaying poles within the band."""
     k, n = len(suspect.data), suspect.length
     env = envelope_of(suspect.data, suspect.weight)
-    keep = min(max(int(round(6.0 / np.min(-suspect.pole.real) * k / n)), 16), k - 4, 160)
+    keep = min(max(round(6.0 / np.min(-suspect.pole.real) * k / n), 16), k - 4, 160)
     part = env[_SKIP : _SKIP + keep]
     out: dict[int, ComplexArray] = {}
     least = 0.1 / n
     for p, z in zip(ORDERS, pencil_poles(part, ORDERS), strict=True):
-        s = np.log(z) * (k / n)
-        turn = np.mod(s.imag, 2 * np.pi * k / n) + 2 * np.pi * suspect.first_bin / n
-        s = -np.clip(-s.real, least, None) + 1j * turn
+        raw = np.log(z) * (k / n)
+        turn = np.mod(raw.imag, 2 * np.pi * k / n) + 2 * np.pi * suspect.first_bin / n
+        s = -np.clip(-raw.real, least, None) + 1j * turn
         good = (np.abs(z) < 1.0 + 2.0 / k) & (-s.real < 4 * np.max(-suspect.pole.real))
         if good.sum() == p:
             out[p] = s[np.argsort(s.imag)]
@@ -102,7 +102,14 @@ def resolve(poles: Poles, fits: list[GroupFit], least_excess: float, loudest: fl
     """
     pairs = [(g, r) for g, r in suspects_of(fits, least_excess) if g.batch.members.shape[1] <= _MOST_MEMBERS]
     suspects = [
-        Suspect(g.batch.rows.data[r], g.batch.rows.weight[r], int(g.batch.rows.first_bin[r]), int(g.batch.rows.length[r]), g.fit.pole[r], float(g.fit.chi2[r]))
+        Suspect(
+            g.batch.rows.data[r],
+            g.batch.rows.weight[r],
+            int(g.batch.rows.first_bin[r]),
+            int(g.batch.rows.length[r]),
+            g.fit.pole[r],
+            float(g.fit.chi2[r]),
+        )
         for g, r in pairs
     ]
     tried = _fit_all(suspects)
@@ -132,10 +139,7 @@ def resolve(poles: Poles, fits: list[GroupFit], least_excess: float, loudest: fl
 def _keeps(new: Poles, old: Poles, fitted: ComplexArray) -> bool:
     """Every strong member of the group has a successor within a width: what is there may be split, not lost."""
     energy = np.abs(old.amplitude) ** 2 / -old.pole.real
-    for s in fitted[energy > 0.1 * energy.max()]:
-        if np.min(np.abs(new.pole.imag - s.imag)) > 2.0 * -s.real:
-            return False
-    return True
+    return all(np.min(np.abs(new.pole.imag - s.imag)) <= 2.0 * -s.real for s in fitted[energy > 0.1 * energy.max()])
 
 
 def _ours(new: Poles, poles: Poles, members: np.ndarray) -> np.ndarray:
@@ -188,4 +192,7 @@ def _sound(fit: RowFit, row: int, suspect: Suspect) -> bool:
     a = -fit.pole[row].real
     u = np.sqrt(np.maximum(np.diagonal(fit.covariance[row])[0::2], 0.0))
     total = np.abs(np.sum(fit.amplitude[row]))
-    return bool(np.all((u < 0.6 * a) | (a * suspect.length < 0.3)) and np.max(np.abs(fit.amplitude[row])) < 30 * max(total, np.median(np.abs(fit.amplitude[row]))))
+    return bool(
+        np.all((u < 0.6 * a) | (a * suspect.length < 0.3))
+        and np.max(np.abs(fit.amplitude[row])) < 30 * max(total, np.median(np.abs(fit.amplitude[row])))
+    )

@@ -44,7 +44,8 @@ REST = (
 )
 
 MAIN_STRIKE_AFTER_S = {"perc_till": 0.140, "guit_harmonics": 1.218, "perc_bell": 0.012}
-"""Three files hold several events (perc_bell a tick before its strike): the main one (largest rise of energy from one 5 ms to the next) begins after this time."""
+"""Three files hold several events (perc_bell a tick before its strike): the main one begins after this time. It is the one with the
+largest rise of energy from one 5 ms to the next."""
 
 CLASSES = {"3-8 dB": (3.0, 8.0), "8-15 dB": (8.0, 15.0), ">15 dB": (15.0, math.inf)}
 
