@@ -21,6 +21,7 @@ _COARSE = 0.12
 """a band's sample longer than this many time constants cannot tell where in a mode's life the residual stands"""
 _LONGEST_S = 1.5
 """the knock and what it brings are over by then: later the residual is taken to stand at its last level"""
+_AS_GOOD = 1.04
 _BROAD_S = 0.5
 _CLEAR_WIDTHS = 1.5
 """half-power widths either side of a mode that its own misfit may fill"""
@@ -141,7 +142,8 @@ def best_start(band: BandProfile, decay_rate_per_s: float, starts_s: FloatArray,
     tail = np.append(np.cumsum(weight[::-1])[::-1], 0.0)
     at = np.clip(np.searchsorted(edges, starts_s - 1e-9), 0, len(edges) - 2)
     variance = tail_p[at] / np.maximum(tail[at], 1e-30 * tail[0] + 1e-300) ** 2 * tail[0]
-    return int(np.argmin(variance)), np.asarray(variance)
+    # the earliest start that is as good within a few per cent: modes that share a start share its transforms
+    return int(np.argmax(variance <= _AS_GOOD * variance.min())), np.asarray(variance)
 
 
 def spread_in_time(band: BandProfile, influence: ComplexArray, root_weight: FloatArray, start_s: float, length_s: float) -> FloatArray:

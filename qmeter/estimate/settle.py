@@ -30,6 +30,7 @@ CROWDED = 4.0
 """chi2 over its expectation above which the misfit is other modes, not a knock that will be over: a late start would not help"""
 PASSING = 30.0
 """chi2 over its expectation that a knock at the start may leave in a fit that is trusted all the same"""
+FEW = 4
 HEALTHY = 1.8
 """chi2 over its expectation below which a group has nothing left to explain"""
 CROWD = 4
@@ -177,9 +178,9 @@ def _limits(ring: Ring) -> tuple[float, float]:
 
 
 def _first_fit(ring: Ring, poles: Poles, contact: int) -> Poles:
-    """Two rounds at a common early start: rough candidates subtract each other badly."""
+    """Fitted at a common early start, twice where there are many: rough candidates subtract each other badly."""
     loudest, still = _limits(ring)
-    for _ in range(2):
+    for _ in range(1 if len(poles) <= FEW else 2):
         poles = merged(poles)
         starts = first_starts(poles, contact, len(ring.samples))
         fits = fit_groups(
