@@ -80,8 +80,8 @@ def look_lengths(frames: int, rate: float) -> list[int]:
     return lengths
 
 
-def find_modes(ring: Ring, *, rounds: int = 3) -> Poles:
-    """Candidates over all looks."""
+def find_modes(ring: Ring, *, rounds: int = 3, over_local: float = _PEAK_OVER_LOCAL) -> Poles:
+    """Candidates over all looks; `over_local`: power of a peak over the local median."""
     found = Poles.none()
     rest = ring.samples
     looks = [(n, True) for n in look_lengths(len(rest), ring.rate)]
@@ -89,7 +89,7 @@ def find_modes(ring: Ring, *, rounds: int = 3) -> Poles:
     for level, (length, hann) in enumerate(looks):
         for _ in range(rounds if hann else 1):
             spectrum = spectrum_of(rest, length)
-            new = _look(ring, hann_bins(spectrum) if hann else spectrum, length, longest=level == 0, hann=hann)
+            new = _look(ring, hann_bins(spectrum) if hann else spectrum, length, longest=level == 0, hann=hann, over_local=over_local)
             new = new.take(np.abs(new.amplitude) < 1.5 * np.max(np.abs(rest[:length])))
             if not len(new):
                 break
@@ -98,22 +98,22 @@ def find_modes(ring: Ring, *, rounds: int = 3) -> Poles:
     return found
 
 
-def floor_of(power: FloatArray, ring: Ring, length: int, *, hann: float = HANN_POWER, block: int = 48) -> FloatArray:
-    """What a peak must exceed: `_PEAK_OVER_NOISE` times the noise, and `_PEAK_OVER_LOCAL` times the local median of the spectrum itself."""
+def floor_of(power: FloatArray, ring: Ring, length: int, *, hann: float, over_local: float, block: int = 48) -> FloatArray:
+    """What a peak must exceed: `_PEAK_OVER_NOISE` times the noise, and `over_local` times the local median of the spectrum itself."""
     bins = len(power)
     blocks = max(bins // block, 1)
     used = blocks * block if bins >= block else bins
-    medians = np.median(power[:used].reshape(blocks, -1), axis=1) * (_MEDIAN_TO_MEAN * _PEAK_OVER_LOCAL)
+    medians = np.median(power[:used].reshape(blocks, -1), axis=1) * (_MEDIAN_TO_MEAN * over_local)
     centre = (np.arange(blocks) + 0.5) * (used / blocks)
     known = ring.noise.at(np.maximum(centre, 0.5) * ring.rate / length) * (length * ring.rate / 2 * hann * _PEAK_OVER_NOISE)
     level = np.log(np.maximum(np.maximum(medians, known), 1e-300))
     return np.asarray(np.exp(np.interp(np.arange(bins), centre, level)))
 
 
-def _look(ring: Ring, bins: ComplexArray, length: int, *, longest: bool, hann: bool) -> Poles:
+def _look(ring: Ring, bins: ComplexArray, length: int, *, longest: bool, hann: bool, over_local: float) -> Poles:
     """One look: peaks of the bins over the floor, fitted; those that rang for a fair part of this look are kept."""
     power = bins.real**2 + bins.imag**2
-    floor = floor_of(power, ring, length, hann=HANN_POWER if hann else 1.0)
+    floor = floor_of(power, ring, length, hann=HANN_POWER if hann else 1.0, over_local=over_local)
     step = ring.rate / length
     lo, hi = max(int(ring.low_hz / step), 2), min(int(ring.high_hz / step) + 1, len(power) - 2)
     if hi - lo < 2:

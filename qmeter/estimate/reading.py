@@ -11,7 +11,7 @@ from qmeter.dsp.strikes import StrikeSpan
 from qmeter.estimate import doubts
 from qmeter.estimate.drift import Drift, find_drifts
 from qmeter.estimate.drifting import by_level, drift_mode, leftover
-from qmeter.estimate.find import Ring, find_modes
+from qmeter.estimate.find import Poles, Ring, find_modes
 from qmeter.estimate.groups import rest_of
 from qmeter.estimate.half_power import ModeRing
 from qmeter.estimate.hearing import Heard, heard, is_driven, unexplained
@@ -20,6 +20,8 @@ from qmeter.estimate.pool import clock_part
 from qmeter.estimate.routes import cross_checked, mode_rings
 from qmeter.estimate.settle import SHORTEST, Settled, settle
 
+_ALONE = 25.0
+"""power over the local median of peaks that stand alone: a line that runs far leaves a crowd of lesser ones behind it"""
 _DB_PER_NEPER = 8.685889638
 _TRACE_POINTS = 240
 _HEARD_DB = 20.0
@@ -98,6 +100,11 @@ def _rung(what: Heard, span: StrikeSpan, settings: Settings) -> tuple[tuple[Mode
                 return (), doubts.driven(what.growth_db, left)
             settled = _finite(settle(ring, found, contact))
             drifts = find_drifts(ring, settled.poles, settled.start, contact=contact, candidates=found)
+            if not drifts and _unstood(found, settled):
+                found = find_modes(ring, over_local=_ALONE)
+                alone = _finite(settle(ring, found, contact))
+                drifts = find_drifts(ring, alone.poles, alone.start, contact=contact, candidates=found)
+                settled = alone if drifts else settled
             if drifts:
                 ring, settled = _without(ring, settled, drifts, contact)
             if not len(settled.poles) and not drifts:
@@ -107,6 +114,15 @@ def _rung(what: Heard, span: StrikeSpan, settings: Settings) -> tuple[tuple[Mode
             return by_level([*straight, *(drift_mode(d, ring, settled.poles, settings.clock_ppm) for d in drifts)]), None
     except np.linalg.LinAlgError:
         return (), None
+
+
+def _unstood(found: Poles, settled: Settled) -> bool:
+    """Whether the loudest candidate has no settled mode within three widths: it may run so far that it was taken for many."""
+    if not len(found):
+        return False
+    top = int(np.argmax(np.abs(found.amplitude) ** 2 / -found.pole.real))
+    gap = np.abs(settled.poles.pole.imag - found.pole[top].imag)
+    return bool(np.all(gap > 6.0 * np.maximum(-settled.poles.pole.real, -found.pole[top].real)))
 
 
 def _without(ring: Ring, settled: Settled, drifts: tuple[Drift, ...], contact: int) -> tuple[Ring, Settled]:

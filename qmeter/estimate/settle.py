@@ -30,7 +30,13 @@ CROWDED = 4.0
 """chi2 over its expectation above which the misfit is other modes, not a knock that will be over: a late start would not help"""
 PASSING = 30.0
 """chi2 over its expectation that a knock at the start may leave in a fit that is trusted all the same"""
+HELD = 0.6
+"""share of the ladder's rungs in which a mode of a crowd must be found again"""
+RELATIVE, RELATIVE_LOUD, LOUD_DB = 0.2, 0.4, 10.0
+"""standard uncertainty of the decay rate above which a line of a crowd is no mode; for those within 10 dB of the loudest, which are seen
+with the bare eye and only ill determined"""
 FEW = 4
+"""candidates that subtract each other well enough for one round"""
 HEALTHY = 1.8
 """chi2 over its expectation below which a group has nothing left to explain"""
 CROWD = 4
@@ -145,7 +151,9 @@ def _from_crowd(crowd: Crowd, ring: Ring) -> Settled:
     settled = Settled(crowd.poles, fit, fit, np.full(m, crowd.start), np.full(m, crowd.length), excess, whole, model)
     with np.errstate(all="ignore"):
         relative = np.sqrt(fit[:, 0, 0] + model[:, 0, 0]) / -crowd.poles.pole.real
-    keep = (crowd.held >= 0.6) & (relative < 0.2) & ~steady(crowd.poles, ring)
+        loud = 20 * np.log10(np.abs(crowd.poles.amplitude) / np.max(np.abs(crowd.poles.amplitude), initial=1e-300))
+    limit = np.where(loud > -LOUD_DB, RELATIVE_LOUD, RELATIVE)
+    keep = (crowd.held >= HELD) & (relative < limit) & ~steady(crowd.poles, ring)
     hz = crowd.poles.pole.imag * ring.rate / (2 * np.pi)
     return settled.take(keep & (hz > ring.low_hz) & (hz < ring.high_hz))
 
