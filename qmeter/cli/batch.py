@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import multiprocessing
+import multiprocessing.process
 import os
 import signal
 from collections.abc import Callable, Iterator, Sequence
@@ -119,9 +120,7 @@ def _workers(count: int) -> Iterator[ProcessPoolExecutor]:
         pool.shutdown()
     except BaseException:
         pool.shutdown(wait=False, cancel_futures=True)
-        for process in multiprocessing.active_children():
-            if process not in known:
-                process.terminate()
+        _stop(known)
         raise
     finally:
         for name, value in before.items():
@@ -129,6 +128,19 @@ def _workers(count: int) -> Iterator[ProcessPoolExecutor]:
                 os.environ.pop(name, None)
             else:
                 os.environ[name] = value
+
+
+def _stop(known: set[multiprocessing.process.BaseProcess]) -> None:
+    """End every child process but the known ones; twice, since one may have been on its way while the first were ended."""
+    for _ in range(2):
+        mine = [process for process in multiprocessing.active_children() if process not in known]
+        for process in mine:
+            process.terminate()
+        for process in mine:
+            process.join(5)
+            if process.is_alive():
+                process.kill()
+                process.join(5)
 
 
 def _ignore_interrupt() -> None:
