@@ -64,3 +64,11 @@ def pytest_report_header() -> str:
     if not missing:
         return f"real recordings: all {len(REAL_SHA256)} there"
     return f"real recordings: MISSING {', '.join(missing)}; tests on them are {'failed' if os.environ.get(REQUIRE_REAL) else 'skipped'}"
+
+
+def pytest_collection_modifyitems(items: list[pytest.Item]) -> None:
+    """A module's SHORTFALLS are expected to fail, strictly: each says what falls short, and the run breaks on the day one is mended."""
+    for item in items:
+        reason = getattr(getattr(item, "module", None), "SHORTFALLS", {}).get(item.name)
+        if reason:
+            item.add_marker(pytest.mark.xfail(strict=True, reason=reason))
