@@ -632,7 +632,7 @@ def test_aac_without_pyav_says_how(monkeypatch: pytest.MonkeyPatch, tmp_path: Pa
     head = b"\x00\x00\x00\x1cftypM4A \x00\x00\x02\x00M4A isomiso2"
     error = refusal(save(tmp_path, head + bytes(100)))
     assert error.code == "needs-aac"
-    assert 'pip install "qmeter[aac]"' in error.says and "ffmpeg -i" in error.says
+    assert 'pip install "av<19"' in error.says and "ffmpeg -i" in error.says
 
 
 @pytest.mark.parametrize("content", [b"\x00\x00\x00\x1cftypM4A \x00\x00\x02\x00M4A isomiso2" + bytes(100), b"\xff\xf1" + bytes(200)])

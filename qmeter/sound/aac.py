@@ -27,7 +27,7 @@ def decode_aac(file: BinaryIO, name: str, file_bytes: int, container: str, from_
         import av
     except ImportError as error:
         raise RecordingError(
-            f'{name} holds AAC sound (M4A or ADTS), whatever its name says. Install what reads it: pip install "qmeter[aac]"; '
+            f'{name} holds AAC sound (M4A or ADTS), whatever its name says. Install what reads it: python -m pip install "av<19"; '
             "or convert it to WAV: ffmpeg -i FILE converted.wav",
             code="needs-aac",
         ) from error
