@@ -7,7 +7,6 @@ fitted as one line). What does not stand out of its surroundings is dropped.
 
 from __future__ import annotations
 
-import math
 from dataclasses import dataclass, fields, replace
 
 import numpy as np
@@ -36,8 +35,6 @@ HELD = 0.6
 RELATIVE, RELATIVE_LOUD, LOUD_DB = 0.2, 0.4, 10.0
 """standard uncertainty of the decay rate above which a line of a crowd is no mode; for those within 10 dB of the loudest, which are seen
 with the bare eye and only ill determined"""
-LOOSE = 2.0
-"""times the usual leash that a first fit may run: a pair in antiphase looks fast at first sight"""
 FEW = 4
 """candidates that subtract each other well enough for one round"""
 HEALTHY = 1.8
@@ -197,7 +194,7 @@ def _first_fit(ring: Ring, poles: Poles, contact: int) -> Poles:
         fits = fit_groups(
             ring, poles, joint_groups(poles, still), starts, Looks(ring, rest_of(ring, poles)), still, steps=6, loudest=loudest
         )
-        poles, _ = moved(poles, fits, loudest, still, LOOSE)
+        poles, _ = moved(poles, fits, loudest, still)
     return poles
 
 
@@ -322,8 +319,7 @@ def _local_level(ring: Ring, g: GroupFit, r: int, ratio: float, hz: float) -> fl
     here = float(g.freedom[r])
     if ratio > 1.6:
         return ratio
-    # the level is a mean over so many bins and itself uncertain by 1/sqrt(their number): half of that on the safe side
-    return (behind + here * ratio) / (behind + here) * (1.0 + 0.5 / math.sqrt(behind + here))
+    return (behind + here * ratio) / (behind + here)
 
 
 def worthy(s: Settled, ring: Ring, *, local: bool = False) -> np.ndarray:
