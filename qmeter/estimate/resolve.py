@@ -52,8 +52,8 @@ def suspects_of(fits: list[GroupFit], least_excess: float) -> list[tuple[GroupFi
     return out
 
 
-def envelope_of(data: ComplexArray, weight: FloatArray) -> ComplexArray:
-    """Complex envelope (K samples over the slice's length) of whitened-and-tapered bins; its zero frequency is the first bin."""
+def envelope_of(data: ComplexArray) -> ComplexArray:
+    """Complex envelope (K samples over the slice's length) of tapered bins; its zero frequency is the first bin."""
     k = len(data)
     edge = max(int(_EDGE * k / 2), 2)
     taper = np.ones(k)
@@ -80,7 +80,7 @@ def pencil_poles(envelope: ComplexArray, orders: tuple[int, ...]) -> list[Comple
 def proposals(suspect: Suspect) -> dict[int, ComplexArray]:
     """Start poles per sample, for each order that gives as many decaying poles within the band."""
     k, n = len(suspect.data), suspect.length
-    env = envelope_of(suspect.data, suspect.weight)
+    env = envelope_of(suspect.data)
     keep = min(max(round(6.0 / np.min(-suspect.pole.real) * k / n), 16), k - 4, 160)
     part = env[_SKIP : _SKIP + keep]
     out: dict[int, ComplexArray] = {}

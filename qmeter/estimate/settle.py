@@ -101,7 +101,7 @@ def settle(ring: Ring, poles: Poles, contact: int) -> Settled:
                 break
         if np.count_nonzero(state.excess > CROWDED) >= CROWD:
             return _from_crowd(crowd_modes(ring, unshattered(candidates), contact), ring)
-        new = _looked_again(ring, state, weak=turn > 0) if turn < TURNS - 1 else Poles.none()
+        new = _looked_again(ring, state) if turn < TURNS - 1 else Poles.none()
         if not len(new):
             break
         state = _State.of(ring, state.poles.plus(new), contact)
@@ -230,7 +230,7 @@ def _sweep(ring: Ring, state: _State, contact: int, *, careful: bool, resolving:
     return (_State.of(ring, plain, contact) if len(plain) < len(poles) else after), settled
 
 
-def _looked_again(ring: Ring, state: _State, *, weak: bool) -> Poles:
+def _looked_again(ring: Ring, state: _State) -> Poles:
     """Modes that show in the residual now that the others are well subtracted, but no splinters of these."""
     new = find_modes(replace(ring, samples=state.rest), rounds=1)
     poles = state.poles
