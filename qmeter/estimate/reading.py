@@ -9,12 +9,13 @@ import numpy as np
 from qmeter.dsp.noise import FloatArray, NoiseSpectrum
 from qmeter.dsp.strikes import StrikeSpan
 from qmeter.estimate import doubts
+from qmeter.estimate.crowd import crowd_modes
 from qmeter.estimate.drift import Drift, find_drifts
 from qmeter.estimate.drifting import by_level, drift_mode, leftover
 from qmeter.estimate.find import Poles, Ring, find_modes
 from qmeter.estimate.groups import rest_of
 from qmeter.estimate.half_power import ModeRing
-from qmeter.estimate.hearing import Heard, heard, is_driven, unexplained
+from qmeter.estimate.hearing import DRIVEN_CROWD, Heard, heard, is_driven, unexplained
 from qmeter.estimate.modes import DecayTrace, Doubt, Mode, Settings, Spread, Strike
 from qmeter.estimate.pool import clock_part
 from qmeter.estimate.routes import cross_checked, mode_rings
@@ -97,7 +98,10 @@ def _rung(what: Heard, span: StrikeSpan, settings: Settings) -> tuple[tuple[Mode
             # the rough fit says it of most speech, whose forest of harmonics would take long to settle
             left = unexplained(ring, found, contact)
             if len(found) and is_driven(what, left):
-                return (), doubts.driven(what.growth_db, left)
+                # a crowd explains itself badly at first; what holds still in many windows explains a ring, and nothing of speech
+                left = min(left, unexplained(ring, crowd_modes(ring, contact).poles, contact))
+                if left > DRIVEN_CROWD:
+                    return (), doubts.driven(what.growth_db, left)
             settled = _finite(settle(ring, found, contact))
             drifts = find_drifts(ring, settled.poles, settled.start, contact=contact, candidates=found)
             if not drifts and _unstood(found, settled):

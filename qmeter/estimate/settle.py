@@ -30,11 +30,7 @@ CROWDED = 4.0
 """chi2 over its expectation above which the misfit is other modes, not a knock that will be over: a late start would not help"""
 PASSING = 30.0
 """chi2 over its expectation that a knock at the start may leave in a fit that is trusted all the same"""
-HELD = 0.6
-"""share of the ladder's rungs in which a mode of a crowd must be found again"""
-RELATIVE, RELATIVE_LOUD, LOUD_DB = 0.2, 0.4, 10.0
-"""standard uncertainty of the decay rate above which a line of a crowd is no mode; for those within 10 dB of the loudest, which are seen
-with the bare eye and only ill determined"""
+REACH_WIDTHS = 4.0
 FEW = 4
 """candidates that subtract each other well enough for one round"""
 HEALTHY = 1.8
@@ -92,7 +88,6 @@ def settle(ring: Ring, poles: Poles, contact: int) -> Settled:
     """Final values of the candidates `poles`; `contact` is the sample at which the contact force has ended."""
     if len(ring.samples) < SHORTEST or not len(poles):
         return _nothing()
-    candidates = poles
     state = _State.of(ring, _first_fit(ring, unshattered(poles), contact), contact)
     for turn in range(TURNS):
         for _ in range(2):
@@ -100,7 +95,7 @@ def settle(ring: Ring, poles: Poles, contact: int) -> Settled:
             if len(state.excess) and np.max(state.excess) < HEALTHY:
                 break
         if np.count_nonzero(state.excess > CROWDED) >= CROWD:
-            return _from_crowd(crowd_modes(ring, unshattered(candidates), contact), ring)
+            return _from_crowd(crowd_modes(ring, contact), ring)
         new = _looked_again(ring, state) if turn < TURNS - 1 else Poles.none()
         if not len(new):
             break
@@ -114,8 +109,16 @@ def settle(ring: Ring, poles: Poles, contact: int) -> Settled:
     clean = settled.excess < CROWDED
     if len(settled.poles) and clean.all():
         return settled.take(~steady(settled.poles, ring))
-    crowd = _from_crowd(crowd_modes(ring, unshattered(candidates), contact), ring)
+    crowd = _from_crowd(crowd_modes(ring, contact), ring)
+    crowd = crowd.take(_beside(crowd.poles, settled.poles.take(~clean)))
     return _completed(ring, settled.take(clean | _better_than(settled, crowd)), crowd)
+
+
+def _beside(poles: Poles, sick: Poles) -> np.ndarray:
+    """(M,) which lie within `REACH_WIDTHS` of a mode whose fit does not reach the noise: elsewhere there is nothing to explain."""
+    apart = np.abs(poles.pole.imag[:, None] - sick.pole.imag[None, :])
+    reach = REACH_WIDTHS * 2.0 * np.maximum(-poles.pole.real[:, None], -sick.pole.real[None, :])
+    return np.asarray(np.any(apart < reach, axis=1))
 
 
 def _better_than(settled: Settled, crowd: Settled) -> np.ndarray:
@@ -145,17 +148,10 @@ def _completed(ring: Ring, clean: Settled, crowd: Settled) -> Settled:
 def _from_crowd(crowd: Crowd, ring: Ring) -> Settled:
     """The modes of a crowd that held still, in the form of the others."""
     m = len(crowd.poles)
-    whole = np.arange(m)
-    fit, model = crowd.fit, crowd.model
-    excess = np.full(m, np.inf)
-    settled = Settled(crowd.poles, fit, fit, np.full(m, crowd.start), np.full(m, crowd.length), excess, whole, model)
-    with np.errstate(all="ignore"):
-        relative = np.sqrt(fit[:, 0, 0] + model[:, 0, 0]) / -crowd.poles.pole.real
-        loud = 20 * np.log10(np.abs(crowd.poles.amplitude) / np.max(np.abs(crowd.poles.amplitude), initial=1e-300))
-    limit = np.where(loud > -LOUD_DB, RELATIVE_LOUD, RELATIVE)
-    keep = (crowd.held >= HELD) & (relative < limit) & ~steady(crowd.poles, ring)
+    fit, start, length = crowd.fit, np.full(m, crowd.start), np.full(m, crowd.length)
+    settled = Settled(crowd.poles, fit, fit, start, length, np.full(m, np.inf), np.arange(m), crowd.model)
     hz = crowd.poles.pole.imag * ring.rate / (2 * np.pi)
-    return settled.take(keep & (hz > ring.low_hz) & (hz < ring.high_hz))
+    return settled.take(~steady(crowd.poles, ring) & (hz > ring.low_hz) & (hz < ring.high_hz))
 
 
 @dataclass(frozen=True, slots=True)

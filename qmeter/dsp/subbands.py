@@ -1,0 +1,53 @@
+"""Complex envelopes of many bands from one transform: slices of the spectrum, tapered, moved to zero frequency, transformed back."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+import scipy.fft
+
+from qmeter.dsp.band import ComplexArray, FloatArray
+
+EDGE = 0.25
+"""share of a band on either side over which it fades"""
+CLEAR = 0.14
+"""share on either side in which a line is too faint to be told from its neighbour's alias"""
+
+
+@dataclass(frozen=True, slots=True)
+class Envelopes:
+    """samples: (R, count), one band a row, at rate_hz; zero frequency of a row stands for first_hz of it."""
+
+    samples: ComplexArray
+    first_hz: FloatArray
+    rate_hz: float
+
+
+class Subbands:
+    """The spectrum of a stretch of sound, ready to be cut into bands."""
+
+    def __init__(self, samples: FloatArray, rate: float) -> None:
+        self._size = scipy.fft.next_fast_len(len(samples), real=True)
+        self._bins: ComplexArray = np.asarray(scipy.fft.rfft(samples, self._size))
+        self._rate = rate
+        self.duration_s = len(samples) / rate
+
+    def envelopes(self, centre_hz: FloatArray, bandwidth_hz: float, count: int) -> Envelopes:
+        """The first `count` samples of each band's envelope: the analytic signal of the band, sampled once per 1/bandwidth."""
+        width = max(round(bandwidth_hz * self._size / self._rate), 8)
+        first = np.round(centre_hz * self._size / self._rate).astype(np.int64) - width // 2
+        at = first[:, None] + np.arange(width)
+        rows = np.where((at >= 0) & (at < len(self._bins)), self._bins[np.clip(at, 0, len(self._bins) - 1)], 0.0) * _fade(width)
+        envelope = np.asarray(scipy.fft.ifft(rows, axis=1, overwrite_x=True)) * (2.0 * width / self._size)
+        step = self._rate / self._size
+        return Envelopes(envelope[:, :count], np.asarray(first * step, dtype=np.float64), width * step)
+
+
+def _fade(width: int) -> FloatArray:
+    edge = max(int(EDGE * width), 1)
+    ramp = 0.5 - 0.5 * np.cos(np.pi * (np.arange(edge) + 0.5) / edge)
+    fade = np.ones(width)
+    fade[:edge] = ramp
+    fade[-edge:] = ramp[::-1]
+    return fade
