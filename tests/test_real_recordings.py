@@ -32,11 +32,8 @@ NAMES = [f"{name.removesuffix('.flac')}-{mode['frequency_hz']}" for name, mode i
 pytestmark = pytest.mark.timeout(180)
 
 SHORTFALLS = {
-    "test_start_moves_nothing[tabla_na-1458-20]": "Q 20 ms later lies just outside the joint u95",
-    "test_bandwidth_moves_nothing[tabla_tun3-559-48 kHz]": "the 559 Hz line comes out as a close pair in one and as one line in the other",
     "test_every_lone_mode_is_heard_in_its_band[perc_till.flac]": "a line at 7972 Hz is stated 10 dB too loud at the onset",
     "test_glide_is_doubted": "the drift model follows the late, slow part of the glide: its Q is not that of the first 25 dB",
-    "test_free_decay_holds_still": "Q of the guitar's strongest partial moves by 1.1 joint u95",
 }
 """Checks that real recordings still fail, word for word in docs/accuracy.md (known shortfalls): strict, so that mending one is noticed."""
 

@@ -37,8 +37,8 @@ def pencil(series: ComplexArray, orders: tuple[int, ...]) -> dict[int, ComplexAr
     The subspace comes from the Hankel matrix' own covariance; with V0, V1 its basis without the last and the first row, and u the last
     row, V0^H V0 = I - u^H u, so that the least-squares shift needs no further decomposition.
     """
-    half = series.shape[1] // 2
-    hankel = np.lib.stride_tricks.sliding_window_view(series, half + 1, axis=1)
+    third = max(series.shape[1] // 3, max(orders) + 2)
+    hankel = np.lib.stride_tricks.sliding_window_view(series, third + 1, axis=1)
     _, vectors = np.linalg.eigh(_adjoint(hankel) @ hankel)
     basis = vectors[:, :, ::-1].conj()
     out: dict[int, ComplexArray] = {}
@@ -65,7 +65,6 @@ def lines_of(series: ComplexArray, z: ComplexArray) -> Lines:
     s = s + np.where(np.abs(step) > _MOST_STEP * np.maximum(-s.real, 0.2 / length), 0.0, step)
     s = np.where(s.real > -least, -least + 1j * s.imag, s)
     grown, amplitude, rest = _amplitudes(series, s, n)
-    columns, scale, inverse = _normal(grown, amplitude, n)
     residual = np.sum(np.abs(rest) ** 2, axis=1) / max(length - 2 * p, 4)
     own = np.real(np.diagonal(inverse, axis1=1, axis2=2))[:, p:] * scale[:, p:] ** 2
     energy = np.abs(amplitude) ** 2 * np.sum(np.abs(grown) ** 2, axis=1)

@@ -99,8 +99,7 @@ def _rung(what: Heard, span: StrikeSpan, settings: Settings) -> tuple[tuple[Mode
             left = unexplained(ring, found, contact)
             if len(found) and is_driven(what, left):
                 # a crowd explains itself badly at first; what holds still in many windows explains a ring, and nothing of speech
-                left = min(left, unexplained(ring, crowd_modes(ring, contact).poles, contact))
-                if left > DRIVEN_CROWD:
+                if unexplained(ring, crowd_modes(ring, contact).poles, contact) > DRIVEN_CROWD:
                     return (), doubts.driven(what.growth_db, left)
             settled = _finite(settle(ring, found, contact))
             drifts = find_drifts(ring, settled.poles, settled.start, contact=contact, candidates=found)

@@ -92,7 +92,7 @@ def settle(ring: Ring, poles: Poles, contact: int) -> Settled:
     for turn in range(TURNS):
         for _ in range(2):
             state = _sweep(ring, state, contact, careful=turn > 0, resolving=True)[0]
-            if len(state.excess) and np.max(state.excess) < HEALTHY:
+            if len(state.excess) and (np.max(state.excess) < HEALTHY or _hopeless(state)):
                 break
         if np.count_nonzero(state.excess > CROWDED) >= CROWD:
             return _from_crowd(crowd_modes(ring, contact), ring)
@@ -119,6 +119,11 @@ def _beside(poles: Poles, sick: Poles) -> np.ndarray:
     apart = np.abs(poles.pole.imag[:, None] - sick.pole.imag[None, :])
     reach = REACH_WIDTHS * 2.0 * np.maximum(-poles.pole.real[:, None], -sick.pole.real[None, :])
     return np.asarray(np.any(apart < reach, axis=1))
+
+
+def _hopeless(state: _State) -> bool:
+    """Whether so many fits miss the noise that another round would not help; a swap of poles just made is given its round."""
+    return int(np.count_nonzero(np.isfinite(state.excess) & (state.excess > CROWDED))) >= 3 * CROWD
 
 
 def _better_than(settled: Settled, crowd: Settled) -> np.ndarray:

@@ -31,6 +31,8 @@ PROMINENT = 6.0
 """power of a line's peak over the median of the spectrum around it, over three time constants; what a knock or a cymbal's hiss makes up
 mostly lies below"""
 AROUND_WIDTHS, AROUND_BINS = 30.0, 24.0
+LOUDER = 10.0
+"""in energy: a loud wide mode and a faint narrow one may share a place"""
 BEST = 3
 """windows whose variances are averaged: what one good look is worth"""
 
@@ -207,14 +209,16 @@ def prominence(samples: FloatArray, rate: float, omega: FloatArray, decay: Float
 
 
 def _each_once(s: Stable) -> Stable:
-    """Without second readings of a line: within half a half-power width of one that holds better, with a like decay."""
+    """Without second readings of a line: within half a half-power width of one that holds better, with a like decay, and not far louder."""
     with np.errstate(all="ignore"):
         rank = s.held * s.seen * s.value[:, 0] / np.sqrt(np.maximum(s.single, s.scatter[:, 0]))
+    energy = np.abs(s.amplitude) ** 2 / s.value[:, 0]
     kept: list[int] = []
     for i in np.argsort(-rank):
         others = s.value[kept]
         apart = np.abs(s.value[i, 1] - others[:, 1])
         like = np.abs(np.log(s.value[i, 0] / others[:, 0])) < np.log(3.0)
-        if not np.any((apart < np.maximum(s.value[i, 0], others[:, 0])) & like):
+        softer = energy[i] < LOUDER * energy[kept]
+        if not np.any((apart < np.maximum(s.value[i, 0], others[:, 0])) & like & softer):
             kept.append(int(i))
     return s.take(np.sort(np.array(kept, dtype=np.int64)))

@@ -45,11 +45,19 @@ def invented(case: Case, estimates: list[Any], found: dict[int, int]) -> list[fl
 
 
 def reported_modes(case: Case, result: Any) -> list[Any]:
-    """The pooled modes; where a real recording was taken for several strikes, those of the strike in which the mode was put."""
-    if not case.judges_inventions and len(result.strikes) > 1:
-        nearest = min(result.strikes, key=lambda s: abs(s.onset_s - case.onset / case.rate_hz))
-        return list(nearest.modes) or list(result.modes)
-    return list(result.modes)
+    """The pooled modes; where a real recording was taken for several strikes, those of the strike in which the mode was put.
+
+    A mode rings on into the strikes after it: what that strike does not show of it, a later one may.
+    """
+    if case.judges_inventions or len(result.strikes) < 2:
+        return list(result.modes)
+    onset_s = case.onset / case.rate_hz
+    nearest = min(range(len(result.strikes)), key=lambda i: abs(result.strikes[i].onset_s - onset_s))
+    for strike in result.strikes[nearest:]:
+        near = [m for m in strike.modes if any(abs(m.damped_frequency_hz - t.damped_frequency_hz) <= t.reach_hz for t in case.modes)]
+        if near:
+            return list(strike.modes)
+    return list(result.strikes[nearest].modes) or list(result.modes)
 
 
 def doubt_codes(measurement: Any, modes: list[Any]) -> set[str]:
