@@ -28,6 +28,8 @@ _SHORTEST_S = 0.004
 _BURST_S = (0.008, 0.002, 0.0006)
 """looks with unweighted bins: what is over within a few milliseconds is mostly gone under a Hann window's soft start"""
 _BURST_PEAKS = 6
+_LOUDEST = 3.0
+"""amplitude over the largest sample: two lines in antiphase may each stand above it, giants that cancel are no modes"""
 _MOST_PEAKS = 96
 
 
@@ -90,7 +92,7 @@ def find_modes(ring: Ring, *, rounds: int = 3, over_local: float = _PEAK_OVER_LO
         for _ in range(rounds if hann else 1):
             spectrum = spectrum_of(rest, length)
             new = _look(ring, hann_bins(spectrum) if hann else spectrum, length, longest=level == 0, hann=hann, over_local=over_local)
-            new = new.take(np.abs(new.amplitude) < 1.5 * np.max(np.abs(rest[:length])))
+            new = new.take(np.abs(new.amplitude) < _LOUDEST * np.max(np.abs(rest[:length])))
             if not len(new):
                 break
             found = found.plus(new)

@@ -215,7 +215,9 @@ def _fit_batches(items: list[Batch], steps: int) -> list[GroupFit]:
     return [GroupFit(b, fit_rows(b.rows, b.pole, steps=steps if b.members.shape[1] == 1 else 2 * steps)) for b in items]
 
 
-def successors(poles: Poles, fits: list[GroupFit], loudest: float, steady_decay: float) -> tuple[Poles, np.ndarray, np.ndarray]:
+def successors(
+    poles: Poles, fits: list[GroupFit], loudest: float, steady_decay: float, leash: float = 1.0
+) -> tuple[Poles, np.ndarray, np.ndarray]:
     """The poles after these fits (all of them, in their places), which of them have a fit that says something, and which were fitted.
 
     A fit says nothing when the decay rate is not told from zero within a factor of two, the amplitude is several times the loudest
@@ -231,8 +233,11 @@ def successors(poles: Poles, fits: list[GroupFit], loudest: float, steady_decay:
             decay = -new.real
             u = np.sqrt(np.diagonal(g.fit.covariance, axis1=1, axis2=2)[:, 0::2])
             was = -poles.pole[m].real
-            ran = np.abs(new.imag - poles.pole[m].imag) > LEASH_WIDTHS * 2.0 * np.maximum(decay, was) + 6.0 / g.batch.rows.length[:, None]
-            ran |= (np.abs(np.log(decay / was)) > np.log(LEASH_DECAYS)) & (decay > steady_decay)
+            ran = (
+                np.abs(new.imag - poles.pole[m].imag)
+                > leash * LEASH_WIDTHS * 2.0 * np.maximum(decay, was) + 6.0 / g.batch.rows.length[:, None]
+            )
+            ran |= (np.abs(np.log(decay / was)) > leash * np.log(LEASH_DECAYS)) & (decay > steady_decay)
             told = (u < 0.5 * decay) | (decay < steady_decay)
             good = told & ~ran & (np.abs(amplitude) < 3.0 * loudest) & np.isfinite(amplitude) & (decay > 0)
         s[m[good]], c[m[good]] = new[good], amplitude[good]
@@ -242,9 +247,9 @@ def successors(poles: Poles, fits: list[GroupFit], loudest: float, steady_decay:
     return Poles(s, c), good_all, fitted
 
 
-def moved(poles: Poles, fits: list[GroupFit], loudest: float, steady_decay: float) -> tuple[Poles, np.ndarray]:
+def moved(poles: Poles, fits: list[GroupFit], loudest: float, steady_decay: float, leash: float = 1.0) -> tuple[Poles, np.ndarray]:
     """The poles after these fits without those whose fit says nothing: dropped before they are subtracted and spoil their neighbours."""
-    after, good, _ = successors(poles, fits, loudest, steady_decay)
+    after, good, _ = successors(poles, fits, loudest, steady_decay, leash)
     return after.take(good), good
 
 

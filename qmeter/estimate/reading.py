@@ -97,10 +97,8 @@ def _rung(what: Heard, span: StrikeSpan, settings: Settings) -> tuple[tuple[Mode
             found = find_modes(ring)
             # the rough fit says it of most speech, whose forest of harmonics would take long to settle
             left = unexplained(ring, found, contact)
-            if len(found) and is_driven(what, left):
-                # a crowd explains itself badly at first; what holds still in many windows explains a ring, and nothing of speech
-                if unexplained(ring, crowd_modes(ring, contact).poles, contact) > DRIVEN_CROWD:
-                    return (), doubts.driven(what.growth_db, left)
+            if len(found) and is_driven(what, left) and not _holds_still(ring, contact):
+                return (), doubts.driven(what.growth_db, left)
             settled = _finite(settle(ring, found, contact))
             drifts = find_drifts(ring, settled.poles, settled.start, contact=contact, candidates=found)
             if not drifts and _unstood(found, settled):
@@ -117,6 +115,11 @@ def _rung(what: Heard, span: StrikeSpan, settings: Settings) -> tuple[tuple[Mode
             return by_level([*straight, *(drift_mode(d, ring, settled.poles, settings.clock_ppm) for d in drifts)]), None
     except np.linalg.LinAlgError:
         return (), None
+
+
+def _holds_still(ring: Ring, contact: int) -> bool:
+    """Whether what holds still in many windows explains the sound: it does for a ring, however crowded, and not for speech."""
+    return unexplained(ring, crowd_modes(ring, contact).poles, contact) < DRIVEN_CROWD
 
 
 def _unstood(found: Poles, settled: Settled) -> bool:

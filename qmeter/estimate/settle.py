@@ -7,6 +7,7 @@ fitted as one line). What does not stand out of its surroundings is dropped.
 
 from __future__ import annotations
 
+import math
 from dataclasses import dataclass, fields, replace
 
 import numpy as np
@@ -30,7 +31,10 @@ CROWDED = 4.0
 """chi2 over its expectation above which the misfit is other modes, not a knock that will be over: a late start would not help"""
 PASSING = 30.0
 """chi2 over its expectation that a knock at the start may leave in a fit that is trusted all the same"""
+LOOSE = 2.0
+"""times the usual leash that a first fit may run: a pair in antiphase looks fast at first sight"""
 REACH_WIDTHS = 4.0
+"""half-power widths from a sick fit within which a crowd's modes may explain it"""
 FEW = 4
 """candidates that subtract each other well enough for one round"""
 HEALTHY = 1.8
@@ -195,7 +199,7 @@ def _first_fit(ring: Ring, poles: Poles, contact: int) -> Poles:
         fits = fit_groups(
             ring, poles, joint_groups(poles, still), starts, Looks(ring, rest_of(ring, poles)), still, steps=6, loudest=loudest
         )
-        poles, _ = moved(poles, fits, loudest, still)
+        poles, _ = moved(poles, fits, loudest, still, LOOSE)
     return poles
 
 
@@ -320,7 +324,8 @@ def _local_level(ring: Ring, g: GroupFit, r: int, ratio: float, hz: float) -> fl
     here = float(g.freedom[r])
     if ratio > 1.6:
         return ratio
-    return (behind + here * ratio) / (behind + here)
+    # the level is a mean over so many bins and itself uncertain by 1/sqrt(their number): half of that on the safe side
+    return (behind + here * ratio) / (behind + here) * (1.0 + 0.5 / math.sqrt(behind + here))
 
 
 def worthy(s: Settled, ring: Ring, *, local: bool = False) -> np.ndarray:
