@@ -10,8 +10,8 @@ from dataclasses import dataclass
 import numpy as np
 
 from qmeter.estimate.chart import chart_of
-from qmeter.estimate.find import Poles, Ring
-from qmeter.estimate.poles import ComplexArray, FloatArray
+from qmeter.estimate.find import Pick, Poles, Ring
+from qmeter.estimate.poles import ComplexArray, FloatArray, IntArray
 from qmeter.estimate.stable import PROMINENT, prominence, stable_lines
 
 
@@ -19,16 +19,20 @@ from qmeter.estimate.stable import PROMINENT, prominence, stable_lines
 class Crowd:
     """Modes with the two parts of their covariance, each (M, 2, 2) of (alpha, omega) per sample.
 
-    fit: what one good window is worth. model: what the windows disagree by beyond that. held: (M,) share of the windows that a mode
-    held in. start, length: samples that the windows begin at, and cover.
+    fit: what one good window is worth. model: what the windows disagree by beyond that. seen: (M,) windows that show a mode.
+    start, length: samples that the windows begin at, and cover.
     """
 
     poles: Poles
     fit: FloatArray
     model: FloatArray
-    held: FloatArray
+    seen: IntArray
     start: int
     length: int
+
+    def take(self, which: Pick) -> Crowd:
+        """Some of them."""
+        return Crowd(self.poles.take(which), self.fit[which], self.model[which], self.seen[which], self.start, self.length)
 
 
 def crowd_modes(ring: Ring, contact: int) -> Crowd:
@@ -42,4 +46,4 @@ def crowd_modes(ring: Ring, contact: int) -> Crowd:
     beyond = np.maximum(lines.scatter / ring.rate**2 - single[:, None], 0.0)
     fit = single[:, None, None] * np.eye(2)
     model = beyond[:, :, None] * np.eye(2)
-    return Crowd(Poles(pole, lines.amplitude * np.exp(-pole * start)), fit, model, lines.held, start, len(ring.samples) - start)
+    return Crowd(Poles(pole, lines.amplitude * np.exp(-pole * start)), fit, model, lines.seen, start, len(ring.samples) - start)

@@ -15,7 +15,7 @@ from qmeter.estimate.drifting import by_level, drift_mode, leftover
 from qmeter.estimate.find import Poles, Ring, find_modes
 from qmeter.estimate.groups import rest_of
 from qmeter.estimate.half_power import ModeRing
-from qmeter.estimate.hearing import DRIVEN_CROWD, Heard, heard, is_driven, unexplained
+from qmeter.estimate.hearing import DRIVEN_CROWD, GROWTH_CROWD_DB, Heard, growth_db, heard, is_driven, unexplained
 from qmeter.estimate.modes import DecayTrace, Doubt, Mode, Settings, Spread, Strike
 from qmeter.estimate.pool import clock_part
 from qmeter.estimate.routes import cross_checked, mode_rings
@@ -97,7 +97,7 @@ def _rung(what: Heard, span: StrikeSpan, settings: Settings) -> tuple[tuple[Mode
             found = find_modes(ring)
             # the rough fit says it of most speech, whose forest of harmonics would take long to settle
             left = unexplained(ring, found, contact)
-            if len(found) and is_driven(what, left) and not _holds_still(ring, contact):
+            if len(found) and is_driven(what, left) and not _holds_still(ring, contact, what.noise_rms):
                 return (), doubts.driven(what.growth_db, left)
             settled = _finite(settle(ring, found, contact))
             drifts = find_drifts(ring, settled.poles, settled.start, contact=contact, candidates=found)
@@ -117,8 +117,13 @@ def _rung(what: Heard, span: StrikeSpan, settings: Settings) -> tuple[tuple[Mode
         return (), None
 
 
-def _holds_still(ring: Ring, contact: int) -> bool:
-    """Whether what holds still in many windows explains the sound: it does for a ring, however crowded, and not for speech."""
+def _holds_still(ring: Ring, contact: int, noise_rms: float) -> bool:
+    """Whether the ring itself, from its last contact on, hardly grows, and what holds still in many windows explains it.
+
+    It does for a ring after clatter, however crowded, and not for speech.
+    """
+    if growth_db(ring.samples, ring.rate, noise_rms**2) > GROWTH_CROWD_DB:
+        return False
     return unexplained(ring, crowd_modes(ring, contact).poles, contact) < DRIVEN_CROWD
 
 

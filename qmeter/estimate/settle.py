@@ -31,6 +31,8 @@ CROWDED = 4.0
 """chi2 over its expectation above which the misfit is other modes, not a knock that will be over: a late start would not help"""
 PASSING = 30.0
 """chi2 over its expectation that a knock at the start may leave in a fit that is trusted all the same"""
+SURE = 14
+"""windows that must show a line where only some fits miss the noise: a knock makes up lines that nine to thirteen show"""
 LOOSE = 2.0
 """times the usual leash that a first fit may run: a pair in antiphase looks fast at first sight"""
 REACH_WIDTHS = 4.0
@@ -44,6 +46,8 @@ CROWD = 4
 EARLY, LATE = 0.5, 2.5
 """time constants that a start may come after the onset: while settling, and at the end"""
 SPLINTER_WIDTHS = 2.0
+LEAST_Q = 2.0
+"""below, a line is over before it has swung: a piece of the contact"""
 LEAST_ENERGY = 40.0
 """(a/u(a))^2 = rho^2/4 must exceed a tenth of this: rho^2 over the local residual"""
 
@@ -95,10 +99,10 @@ def settle(ring: Ring, poles: Poles, contact: int) -> Settled:
     state = _State.of(ring, _first_fit(ring, unshattered(poles), contact), contact)
     for turn in range(TURNS):
         for _ in range(2):
-            state = _sweep(ring, state, contact, careful=turn > 0, resolving=True)[0]
+            state, last = _sweep(ring, state, contact, careful=turn > 0, resolving=True)
             if len(state.excess) and (np.max(state.excess) < HEALTHY or _hopeless(state)):
                 break
-        if np.count_nonzero(state.excess > CROWDED) >= CROWD:
+        if np.count_nonzero(last.excess > CROWDED) >= CROWD:
             return _from_crowd(crowd_modes(ring, contact), ring)
         new = _looked_again(ring, state) if turn < TURNS - 1 else Poles.none()
         if not len(new):
@@ -113,8 +117,8 @@ def settle(ring: Ring, poles: Poles, contact: int) -> Settled:
     clean = settled.excess < CROWDED
     if len(settled.poles) and clean.all():
         return settled.take(~steady(settled.poles, ring))
-    crowd = _from_crowd(crowd_modes(ring, contact), ring)
-    crowd = crowd.take(_beside(crowd.poles, settled.poles.take(~clean)))
+    seen = crowd_modes(ring, contact)
+    crowd = _from_crowd(seen.take((seen.seen >= SURE) & _beside(seen.poles, settled.poles.take(~clean))), ring)
     return _completed(ring, settled.take(clean | _better_than(settled, crowd)), crowd)
 
 
@@ -340,6 +344,8 @@ def worthy(s: Settled, ring: Ring, *, local: bool = False) -> np.ndarray:
         rho2 = 4 * a**2 / variance
     hz = s.poles.pole.imag * ring.rate / (2 * np.pi)
     inside = (hz > ring.low_hz) & (hz < ring.high_hz)
+    if not local:
+        inside &= s.poles.pole.imag > 2.0 * LEAST_Q * a
     level = ring.noise.at(hz) * ring.rate / 2 * np.maximum(s.excess, 1.0)
     tone = steady(s.poles, ring) & (np.abs(s.poles.amplitude) ** 2 * s.length / 4 > 16 * level)
     return np.asarray(inside & ((rho2 > LEAST_ENERGY) | tone))
