@@ -28,10 +28,12 @@ _SLOW_S = 0.6
 DRIVEN = ((0.3, 0.95), (1.0, 0.06), (4.0, 0.03))
 """growth in dB, and the share of the energy that the rough fit's modes leave: a sound with more of both is no ring. Speech-like bursts
 mostly grow by 1 to 25 dB and leave 0.04 or more; struck rings that grow by 1 dB or more left below 0.02"""
-DRIVEN_CROWD, GROWTH_CROWD_DB = 0.8, 2.0
-"""what the modes that hold still in many windows may leave, and how much the ring may grow after its last contact, where the first look
-took a crowded ring for speech: clatter with a bell in it left 0.5 to 0.7 and grew by 1.6 dB; speech-like bursts left 0.36 or more and
-grew by 2.2 dB or more"""
+DRIVEN_CROWD, GROWTH_CROWD_DB, FEWEST_CROWD = 0.8, 2.0, 6
+"""share that the modes which hold still may leave, growth after the last contact, and how few they may be, where the first look took a
+crowded ring for speech. Clatter with a bell in it left 0.5 to 0.7, grew by 1.6 dB and gave 19 modes"""
+PITCH_HZ = (60.0, 400.0)
+_ON_PITCH, _VOICED = 0.12, 0.8
+"""distance from a whole multiple of the pitch, and the share of lines within it, that make a voice"""
 
 
 @dataclass(frozen=True, slots=True)
@@ -172,3 +174,11 @@ def is_driven(what: Heard, share: float) -> bool:
     the tap), but then its modes account for it.
     """
     return not what.dies_slowly and any(what.growth_db > grows and share > left for grows, left in DRIVEN)
+
+
+def is_voiced(frequency_hz: FloatArray) -> bool:
+    """Whether most of these lines are harmonics of one pitch of a voice."""
+    pitches = np.geomspace(*PITCH_HZ, 600)
+    orders = frequency_hz[:, None] / pitches[None, :]
+    on_pitch = np.abs(orders - np.round(orders)) < _ON_PITCH
+    return bool(np.max(np.mean(on_pitch, axis=0)) >= _VOICED)

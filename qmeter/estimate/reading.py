@@ -15,7 +15,7 @@ from qmeter.estimate.drifting import by_level, drift_mode, leftover
 from qmeter.estimate.find import Poles, Ring, find_modes
 from qmeter.estimate.groups import rest_of
 from qmeter.estimate.half_power import ModeRing
-from qmeter.estimate.hearing import DRIVEN_CROWD, GROWTH_CROWD_DB, Heard, growth_db, heard, is_driven, unexplained
+from qmeter.estimate.hearing import DRIVEN_CROWD, FEWEST_CROWD, GROWTH_CROWD_DB, Heard, growth_db, heard, is_driven, is_voiced, unexplained
 from qmeter.estimate.modes import DecayTrace, Doubt, Mode, Settings, Spread, Strike
 from qmeter.estimate.pool import clock_part
 from qmeter.estimate.routes import cross_checked, mode_rings
@@ -118,13 +118,16 @@ def _rung(what: Heard, span: StrikeSpan, settings: Settings) -> tuple[tuple[Mode
 
 
 def _holds_still(ring: Ring, contact: int, noise_rms: float) -> bool:
-    """Whether the ring itself, from its last contact on, hardly grows, and what holds still in many windows explains it.
+    """Whether the ring itself, from its last contact on, hardly grows, and many modes that hold still and share no pitch explain it.
 
-    It does for a ring after clatter, however crowded, and not for speech.
+    They do for a ring after clatter, however crowded. The end of a syllable dies away, too, but on the harmonics of a voice.
     """
     if growth_db(ring.samples, ring.rate, noise_rms**2) > GROWTH_CROWD_DB:
         return False
-    return unexplained(ring, crowd_modes(ring, contact).poles, contact) < DRIVEN_CROWD
+    modes = crowd_modes(ring, contact).poles
+    if len(modes) < FEWEST_CROWD or is_voiced(modes.pole.imag * ring.rate / (2.0 * np.pi)):
+        return False
+    return unexplained(ring, modes, contact) < DRIVEN_CROWD
 
 
 def _unstood(found: Poles, settled: Settled) -> bool:
