@@ -14,7 +14,7 @@ import numpy as np
 from qmeter.dsp.band import ComplexArray, FloatArray, spectrum_of
 from qmeter.dsp.noise import fast_length
 from qmeter.dsp.subbands import CLEAR, Envelopes, Subbands
-from qmeter.estimate.find import Ring, floor_of
+from qmeter.estimate.find import Ring, floor_of, peaks_over
 from qmeter.estimate.pencil import lines_of, pencil
 from qmeter.estimate.poles import IntArray
 
@@ -122,8 +122,7 @@ def _peaks(ring: Ring, samples: FloatArray, look_s: float) -> FloatArray:
     low, high = max(int(ring.low_hz / step), 2), min(int(ring.high_hz / step) + 1, len(power) - 2)
     if high - low < 2:
         return np.zeros(0)
-    mid = power[low:high]
-    peaks = np.flatnonzero((mid > power[low - 1 : high - 1]) & (mid >= power[low + 1 : high + 1]) & (mid > floor[low:high])) + low
+    peaks = peaks_over(power, floor, low, high)
     if len(peaks) > _MOST_PEAKS:
         peaks = np.sort(peaks[np.argsort(power[peaks])[-_MOST_PEAKS:]])
     return np.asarray(peaks * step)

@@ -100,16 +100,35 @@ def find_modes(ring: Ring, *, rounds: int = 3, over_local: float = _PEAK_OVER_LO
     return found
 
 
-def floor_of(power: FloatArray, ring: Ring, length: int, *, hann: float, over_local: float, block: int = 48) -> FloatArray:
-    """What a peak must exceed: `_PEAK_OVER_NOISE` times the noise, and `over_local` times the local median of the spectrum itself."""
+@dataclass(frozen=True, slots=True)
+class Floor:
+    """What a peak must exceed: logarithms of power at the centres (bins) of blocks, interpolated between."""
+
+    centre: FloatArray
+    log_power: FloatArray
+
+    def at(self, bins: FloatArray | NDArray[np.int64]) -> FloatArray:
+        """The floor at these bins: the spectra are long, and few of their bins are peaks."""
+        return np.asarray(np.exp(np.interp(bins, self.centre, self.log_power)))
+
+
+def floor_of(power: FloatArray, ring: Ring, length: int, *, hann: float, over_local: float, block: int = 48) -> Floor:
+    """`_PEAK_OVER_NOISE` times the noise, or `over_local` times the local median of the spectrum itself where that is more."""
     bins = len(power)
     blocks = max(bins // block, 1)
     used = blocks * block if bins >= block else bins
     medians = np.median(power[:used].reshape(blocks, -1), axis=1) * (_MEDIAN_TO_MEAN * over_local)
     centre = (np.arange(blocks) + 0.5) * (used / blocks)
     known = ring.noise.at(np.maximum(centre, 0.5) * ring.rate / length) * (length * ring.rate / 2 * hann * _PEAK_OVER_NOISE)
-    level = np.log(np.maximum(np.maximum(medians, known), 1e-300))
-    return np.asarray(np.exp(np.interp(np.arange(bins), centre, level)))
+    log_power = np.log(np.maximum(np.maximum(medians, known), 1e-300))
+    return Floor(np.asarray(centre, dtype=np.float64), np.asarray(log_power, dtype=np.float64))
+
+
+def peaks_over(power: FloatArray, floor: Floor, low: int, high: int) -> NDArray[np.int64]:
+    """Bins of the local maxima within low..high-1 that exceed the floor."""
+    mid = power[low:high]
+    tops = np.flatnonzero((mid > power[low - 1 : high - 1]) & (mid >= power[low + 1 : high + 1])) + low
+    return np.asarray(tops[power[tops] > floor.at(tops)])
 
 
 def _look(ring: Ring, bins: ComplexArray, length: int, *, longest: bool, hann: bool, over_local: float) -> Poles:
@@ -120,9 +139,7 @@ def _look(ring: Ring, bins: ComplexArray, length: int, *, longest: bool, hann: b
     lo, hi = max(int(ring.low_hz / step), 2), min(int(ring.high_hz / step) + 1, len(power) - 2)
     if hi - lo < 2:
         return Poles.none()
-    mid = power[lo:hi]
-    is_peak = (mid > power[lo - 1 : hi - 1]) & (mid >= power[lo + 1 : hi + 1]) & (mid > floor[lo:hi])
-    peaks = np.flatnonzero(is_peak) + lo
+    peaks = peaks_over(power, floor, lo, hi)
     if not len(peaks):
         return Poles.none()
     most = _MOST_PEAKS if hann else _BURST_PEAKS
@@ -168,7 +185,7 @@ def _first_guess_plain(bins: ComplexArray, peaks: np.ndarray, length: int) -> Co
 def _fit_peaks(
     ring: Ring,
     hann_or_plain: ComplexArray,
-    floor: FloatArray,
+    floor: Floor,
     peaks: np.ndarray,
     start: ComplexArray,
     length: int,
@@ -182,7 +199,7 @@ def _fit_peaks(
         bins = min(_LOOK_BINS if m == 1 else _LOOK_BINS + 16 * (m - 1), length // 2 - 1)
         rows = np.array(members)
         first = np.clip((peaks[rows[:, 0]] + peaks[rows[:, -1]]) // 2 - bins // 2, 1, max(length // 2 - bins, 1))
-        level = floor[np.clip((peaks[rows[:, 0]] + peaks[rows[:, -1]]) // 2, 0, len(floor) - 1)]
+        level = floor.at((peaks[rows[:, 0]] + peaks[rows[:, -1]]) // 2)
         data = BinRows(
             bins_around(hann_or_plain, first, bins),
             np.repeat(1.0 / level[:, None], bins, axis=1),

@@ -33,6 +33,8 @@ PASSING = 30.0
 """chi2 over its expectation that a knock at the start may leave in a fit that is trusted all the same"""
 SURE = 14
 """windows that must show a line where only some fits miss the noise: a knock makes up lines that nine to thirteen show"""
+MOVED = 0.1
+"""of its decay rate: a pole that a fit moves by less was subtracted well enough from its neighbours"""
 LOOSE = 2.0
 """times the usual leash that a first fit may run: a pair in antiphase looks fast at first sight"""
 REACH_WIDTHS = 4.0
@@ -195,7 +197,7 @@ def _limits(ring: Ring) -> tuple[float, float]:
 
 
 def _first_fit(ring: Ring, poles: Poles, contact: int) -> Poles:
-    """Fitted at a common early start, twice where there are many: rough candidates subtract each other badly."""
+    """Fitted at a common early start, and once more where that moved them: rough candidates subtract each other badly."""
     loudest, still = _limits(ring)
     for _ in range(1 if len(poles) <= FEW else 2):
         poles = merged(poles)
@@ -203,7 +205,10 @@ def _first_fit(ring: Ring, poles: Poles, contact: int) -> Poles:
         fits = fit_groups(
             ring, poles, joint_groups(poles, still), starts, Looks(ring, rest_of(ring, poles)), still, steps=6, loudest=loudest
         )
-        poles, _ = moved(poles, fits, loudest, still, LOOSE)
+        before = poles
+        poles, _ = moved(before, fits, loudest, still, LOOSE)
+        if len(poles) == len(before) and np.all(np.abs(poles.pole - before.pole) < MOVED * -before.pole.real):
+            break
     return poles
 
 
