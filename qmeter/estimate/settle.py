@@ -99,13 +99,17 @@ def settle(ring: Ring, poles: Poles, contact: int) -> Settled:
     if len(ring.samples) < SHORTEST or not len(poles):
         return _nothing()
     state = _State.of(ring, _first_fit(ring, unshattered(poles), contact), contact)
+    sick = 0
     for turn in range(TURNS):
         for _ in range(2):
             state, last = _sweep(ring, state, contact, careful=turn > 0, resolving=True)
             if len(state.excess) and (np.max(state.excess) < HEALTHY or _hopeless(state)):
                 break
-        if np.count_nonzero(last.excess > CROWDED) >= CROWD:
+        sick, before = int(np.count_nonzero(last.excess > CROWDED)), sick
+        if sick >= CROWD:
             return _from_crowd(crowd_modes(ring, contact), ring)
+        if turn and sick >= before > 0:  # another search did not help
+            break
         new = _looked_again(ring, state) if turn < TURNS - 1 else Poles.none()
         if not len(new):
             break
