@@ -178,6 +178,9 @@ def _special(family: str, records: list[dict[str, Any]], found: list[dict[str, A
         far = _column([m for m in found if m["line_widths"] >= 10], "u_over_bound")
         figures["u/bound, line < 3 widths"] = float(np.median(near)) if near.size else math.nan
         figures["u/bound, line > 10 widths"] = float(np.median(far)) if far.size else math.nan
+    beside = [float(r["notes"]["as_noise_u95"]) for r in records if "as_noise_u95" in r.get("notes", {})]
+    if beside:
+        figures["u95(Q) % if noise"] = 100 * float(np.median(beside))
     if family == "nothing":
         figures["reported"] = sum(len(r["reported"]) for r in records)
         kinds = sorted({str(r["notes"]["kind"]) for r in records})
