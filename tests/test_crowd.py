@@ -194,6 +194,21 @@ def test_one_line_reaches_the_bound(length: int, decay: float, noise_db: float) 
     assert_allclose(np.median(lines.energy[:, 0]), energy, rtol=0.05, atol=0)
 
 
+@pytest.mark.parametrize("share", [0.2, 0.02, 0.002])
+def test_one_step_goes_to_the_least_squares_pole(share: float) -> None:
+    """Poles off by a share of their decay rates: what is left after the step is of the order of its square (Gauss-Newton, no noise)."""
+    s, c = np.array([-0.1 + 1j, -0.06 + 3j]), np.array([1.0, 0.7j])
+    moved = lines_of(sum_of(s, c, 48)[None], np.exp(s - share * s.real * np.array([np.exp(0.5j), 1j]))[None])
+    assert np.max(np.abs(moved.pole[0] - s) / -s.real) < 2 * share**2
+
+
+def test_a_step_too_far_is_not_taken() -> None:
+    """A pole that would move by more than half its decay rate stays where it is: that far the derivatives do not hold."""
+    far = -0.012 + 1j
+    moved = lines_of(sum_of([-0.1 + 1j], [1.0], 48)[None], np.exp([[far]]))
+    assert_allclose(moved.pole[0, 0], far, rtol=1e-12, atol=0)
+
+
 def test_two_lines_state_their_joint_bound() -> None:
     """A pair two half-power widths apart: variances stated and met are those of both lines jointly, not of each alone."""
     s, c, variance = np.array([-0.1 + 1j, -0.1 + 1.4j]), np.array([1.0, 0.7j]), 1e-4
@@ -262,12 +277,12 @@ def test_a_lone_mode_shows_in_every_window_that_ought_to(hz: float, q: float) ->
 
 @pytest.mark.xfail(reason="the fade of a band's edge is not taken out of the amplitude of a line that lies in it", raises=AssertionError)
 def test_no_sighting_of_a_lone_mode_is_fainter_than_the_mode() -> None:
-    """60 dB over the noise: every sighting within a tenth of its half width, and well determined, has its amplitude within 5 % (-26 dB)."""
+    """60 dB over the noise: every well determined sighting of it has its amplitude within 8 % (the click of the onset costs 6)."""
     hz, decay, c = 2000.0, 104.7, 0.7 * np.exp(1j)
     seen, _ = chart_of(in_noise(cosine(hz, decay, c), 0.7e-3 / math.sqrt(2), 1), 160)
     c *= np.exp(complex(-decay, 2 * math.pi * hz) * 160 / RATE_HZ)
     at_it = (np.hypot(seen.omega - 2 * math.pi * hz, seen.decay - decay) < 0.1 * decay) & (seen.variance < (0.01 * decay) ** 2)
-    assert np.max(np.abs(seen.amplitude[at_it] / c - 1)) < 0.05
+    assert np.max(np.abs(seen.amplitude[at_it] / c - 1)) < 0.08
 
 
 @pytest.mark.parametrize(("hz", "q"), LONE)
@@ -293,8 +308,9 @@ def test_silence_shows_nothing() -> None:
 
 @pytest.mark.parametrize("seed", range(3))
 def test_white_noise_shows_nothing(seed: int) -> None:
-    """White noise: no mode, not even where the noise is told 20 dB too low, so that hundreds of its lines are seen."""
+    """White noise: hardly a sighting, and no mode, even where the noise is told 20 dB too low, so that hundreds of its lines are seen."""
     samples = 0.01 * np.random.default_rng(seed).standard_normal(FRAMES)
+    assert len(chart_of(heard(samples, 0.01), 0)[0].omega) < 20
     assert len(crowd_modes(heard(samples, 0.01), 0).poles) == 0
     ring = heard(samples, 0.001)
     seen, ladder = chart_of(ring, 0)
@@ -340,8 +356,7 @@ def sightings(omega: Array, decay: Array) -> Sightings:
 
 def test_scatter_is_that_of_the_windows_and_not_of_their_mean() -> None:
     """31 windows that scatter by 1 % in decay and by twice that in omega: one line with these variances; windows share their samples."""
-    x = np.linspace(-1.0, 1.0, 31)
-    x = x / np.sqrt(np.mean(x**2))
+    x: Array = np.linspace(-1.0, 1.0, 31) * math.sqrt(3 * 30 / 32)  # of mean square one
     ladder = Ladder.over(1.0)
     line = stable_lines(sightings(6283.0 + 0.2 * x[::-1], 10.0 + 0.1 * x), ladder)
     assert_array_equal(line.seen, [31])
@@ -355,14 +370,14 @@ def test_scatter_is_that_of_the_windows_and_not_of_their_mean() -> None:
 @pytest.mark.parametrize(("windows", "lines"), [(7, 0), (15, 0), (16, 1), (31, 1)])
 def test_a_line_has_to_be_seen_often_enough(windows: int, lines: int) -> None:
     """A line that 35 windows ought to show is one if 45 % of them do: 16, not 15."""
-    decay = np.asarray(np.linspace(9.99, 10.01, windows), dtype=np.float64)
+    decay = 10.0 + 0.01 * np.cos(np.arange(windows))
     found = stable_lines(sightings(np.full(windows, 6283.0), decay), Ladder.over(1.0))
     assert len(found.held) == lines
 
 
 def test_a_line_that_does_not_hold_still_is_none() -> None:
     """31 sightings, each of a place of its own: none is a line, though they all lie within ten half widths."""
-    assert len(stable_lines(sightings(6283.0 + 7.0 * np.arange(31), np.full(31, 10.0)), Ladder.over(1.0)).held) == 0
+    assert len(stable_lines(sightings(np.arange(6283.0, 6500.0, 7.0), np.full(31, 10.0)), Ladder.over(1.0)).held) == 0
 
 
 def test_each_line_once() -> None:
