@@ -33,7 +33,9 @@ PASSING = 30.0
 """chi2 over its expectation that a knock at the start may leave in a fit that is trusted all the same"""
 SURE = 14
 """windows that must show a line where only some fits miss the noise: a knock makes up lines that nine to thirteen show"""
-MOVED = 0.1
+STILL = 1.0
+"""standard uncertainties that a round of fits may move a mode by without asking for another"""
+MOVED = 0.3
 """of its decay rate: a pole that a fit moves by less was subtracted well enough from its neighbours"""
 LOOSE = 2.0
 """times the usual leash that a first fit may run: a pair in antiphase looks fast at first sight"""
@@ -102,6 +104,7 @@ def settle(ring: Ring, poles: Poles, contact: int) -> Settled:
     sick = 0
     for turn in range(TURNS):
         for _ in range(2):
+            came = state.poles
             state, last = _sweep(ring, state, contact, careful=turn > 0, resolving=True)
             if len(state.excess) and (np.max(state.excess) < HEALTHY or _hopeless(state)):
                 break
@@ -114,11 +117,7 @@ def settle(ring: Ring, poles: Poles, contact: int) -> Settled:
         if not len(new):
             break
         state = _State.of(ring, state.poles.plus(new), contact)
-    for _ in range(2):
-        known = state.excess
-        state, settled = _sweep(ring, state, contact, careful=True, resolving=False)
-        if len(known) and np.max(known) < HEALTHY and len(state.poles) == len(known):
-            break
+    settled = last if _at_rest(came, last, state) else _final(ring, state, contact)
     settled = settled.take(worthy(settled, ring))
     clean = settled.excess < CROWDED
     if len(settled.poles) and clean.all():
@@ -126,6 +125,25 @@ def settle(ring: Ring, poles: Poles, contact: int) -> Settled:
     seen = crowd_modes(ring, contact)
     crowd = _from_crowd(seen.take((seen.seen >= SURE) & _beside(seen.poles, settled.poles.take(~clean))), ring)
     return _completed(ring, settled.take(clean | _better_than(settled, crowd)), crowd)
+
+
+def _at_rest(came: Poles, last: Settled, state: _State) -> bool:
+    """Whether the last round of fits moved nothing that counts, all of it reaches the noise, and no mode asked for a later start."""
+    if not 0 < len(came) == len(last.poles) == len(state.poles):
+        return False
+    moved_by = np.abs(last.poles.pole - came.pole) / np.sqrt(last.covariance[:, 0, 0])
+    free = last.start * -last.poles.pole.real < 0.8 * EARLY
+    return bool(np.all(state.poles.pole == last.poles.pole) and np.max(last.excess) < HEALTHY and np.max(moved_by) < STILL and np.all(free))
+
+
+def _final(ring: Ring, state: _State, contact: int) -> Settled:
+    """Once or twice more, from starts as late as serves each mode."""
+    for _ in range(2):
+        known = state.excess
+        state, settled = _sweep(ring, state, contact, careful=True, resolving=False)
+        if len(known) and np.max(known) < HEALTHY and len(state.poles) == len(known):
+            break
+    return settled
 
 
 def _beside(poles: Poles, sick: Poles) -> np.ndarray:
@@ -210,8 +228,9 @@ def _first_fit(ring: Ring, poles: Poles, contact: int) -> Poles:
             ring, poles, joint_groups(poles, still), starts, Looks(ring, rest_of(ring, poles)), still, steps=6, loudest=loudest
         )
         before = poles
-        poles, _ = moved(before, fits, loudest, still, LOOSE)
-        if len(poles) == len(before) and np.all(np.abs(poles.pole - before.pole) < MOVED * -before.pole.real):
+        poles, kept = moved(before, fits, loudest, still, LOOSE)
+        was = before.pole[kept]
+        if np.all(np.abs(poles.pole - was) < MOVED * -was.real):
             break
     return poles
 
