@@ -65,3 +65,12 @@ def bins_around(plain: ComplexArray, first_bin: NDArray[np.int64], bins: int) ->
     index = np.where(k < 0, -k, np.where(k > top, 2 * top - k, k))
     out = plain[index]
     return np.where(flip, out.conj(), out)
+
+
+def fade(count: int, edge: int) -> FloatArray:
+    """Weights (count,) that rise from zero over `edge` bins and fall again: half a cosine at either end, ones between."""
+    ramp = 0.5 - 0.5 * np.cos(np.pi * (np.arange(edge) + 0.5) / edge)
+    weight = np.ones(count)
+    weight[:edge] = ramp
+    weight[-edge:] = ramp[::-1]
+    return weight

@@ -7,10 +7,12 @@ from dataclasses import dataclass
 import numpy as np
 import scipy.fft
 
-from qmeter.dsp.band import ComplexArray, FloatArray
+from qmeter.dsp.band import ComplexArray, FloatArray, fade
 
 EDGE = 0.25
 """share of a band on either side over which it fades"""
+FADED = 1.0 - 1.25 * EDGE
+"""mean square of the fade: noise in an envelope's samples is less than in the band's middle by so much"""
 CLEAR = 0.14
 """share on either side in which a line is too faint to be told from its neighbour's alias"""
 
@@ -38,16 +40,19 @@ class Subbands:
         width = max(round(bandwidth_hz * self._size / self._rate), 8)
         first = np.round(centre_hz * self._size / self._rate).astype(np.int64) - width // 2
         at = first[:, None] + np.arange(width)
-        rows = np.where((at >= 0) & (at < len(self._bins)), self._bins[np.clip(at, 0, len(self._bins) - 1)], 0.0) * _fade(width)
+        rows = np.where((at >= 0) & (at < len(self._bins)), self._bins[np.clip(at, 0, len(self._bins) - 1)], 0.0) * fade(
+            width, max(int(EDGE * width), 1)
+        )
         envelope = np.asarray(scipy.fft.ifft(rows, axis=1, overwrite_x=True)) * (2.0 * width / self._size)
         step = self._rate / self._size
         return Envelopes(envelope[:, :count], np.asarray(first * step, dtype=np.float64), width * step)
 
 
-def _fade(width: int) -> FloatArray:
-    edge = max(int(EDGE * width), 1)
-    ramp = 0.5 - 0.5 * np.cos(np.pi * (np.arange(edge) + 0.5) / edge)
-    fade = np.ones(width)
-    fade[:edge] = ramp
-    fade[-edge:] = ramp[::-1]
-    return fade
+def gain(turns: FloatArray, decay: FloatArray) -> ComplexArray:
+    """What the fade leaves of lines at these places in their bands (0 to 1), decaying by so many nepers a sample.
+
+    The fade as a function of frequency, continued to the line's complex frequency: exact where the line decays within the window.
+    """
+    place = turns + 1j * decay / (2.0 * np.pi)
+    inward = np.where(turns < 0.5, place, 1.0 - place)
+    return np.asarray(np.where(inward.real < EDGE, 0.5 - 0.5 * np.cos(np.pi * inward / EDGE), 1.0))

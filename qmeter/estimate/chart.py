@@ -13,7 +13,7 @@ import numpy as np
 
 from qmeter.dsp.band import ComplexArray, FloatArray, spectrum_of
 from qmeter.dsp.noise import fast_length
-from qmeter.dsp.subbands import CLEAR, Envelopes, Subbands
+from qmeter.dsp.subbands import CLEAR, FADED, Envelopes, Subbands, gain
 from qmeter.estimate.find import Ring, floor_of, peaks_over
 from qmeter.estimate.pencil import lines_of, pencil
 from qmeter.estimate.poles import IntArray
@@ -157,8 +157,8 @@ def _lines_in(envelopes: Envelopes, first: int, length: int, number: int) -> Sig
             Sightings(
                 2.0 * np.pi * envelopes.first_hz[row] + s.imag * rate,
                 -s.real * rate,
-                lines.variance[row, line] * rate**2,
-                lines.amplitude[row, line] * np.exp(-s * first),
+                lines.variance[row, line] * (rate**2 / FADED),
+                lines.amplitude[row, line] * np.exp(-s * first) / gain(turn[row, line], decays[row, line]),
                 number + row,
             )
         )

@@ -17,6 +17,7 @@ from dataclasses import dataclass
 import numpy as np
 import scipy.fft
 
+from qmeter.dsp.band import fade
 from qmeter.estimate.poles import BinRows, ComplexArray, FloatArray, bin_response, fit_rows
 
 _OVERSAMPLING = 4
@@ -200,11 +201,7 @@ def _normal(point: _Point) -> tuple[FloatArray, FloatArray, FloatArray]:
 def envelope_of(bins: ComplexArray, *, taper: bool = True) -> ComplexArray:
     """Analytic envelope of a slice of bins against its middle bin: K samples over the row's length (edges tapered over a quarter)."""
     count = len(bins)
-    edge = max(count // 4, 1)
-    ramp = 0.5 - 0.5 * np.cos(np.pi * (np.arange(edge) + 0.5) / edge)
-    weight = np.ones(count)
-    if taper:
-        weight[:edge], weight[-edge:] = ramp, ramp[::-1]
+    weight = fade(count, max(count // 4, 1)) if taper else np.ones(count)
     return np.asarray(scipy.fft.ifft(np.roll(bins * weight, -(count // 2))) * 1.0)
 
 

@@ -12,6 +12,7 @@ from dataclasses import dataclass
 
 import numpy as np
 
+from qmeter.dsp.band import fade
 from qmeter.estimate.find import Poles
 from qmeter.estimate.groups import GroupFit
 from qmeter.estimate.poles import BinRows, ComplexArray, FloatArray, RowFit, fit_rows
@@ -55,16 +56,15 @@ def suspects_of(fits: list[GroupFit], least_excess: float) -> list[tuple[GroupFi
 def envelope_of(data: ComplexArray) -> ComplexArray:
     """Complex envelope (K samples over the slice's length) of tapered bins; its zero frequency is the first bin."""
     k = len(data)
-    edge = max(int(_EDGE * k / 2), 2)
-    taper = np.ones(k)
-    ramp = 0.5 - 0.5 * np.cos(np.pi * (np.arange(edge) + 0.5) / edge)
-    taper[:edge] = ramp
-    taper[-edge:] = ramp[::-1]
+    taper = fade(k, max(int(_EDGE * k / 2), 2))
     return np.asarray(np.fft.ifft(data * taper) * k)
 
 
 def pencil_poles(envelope: ComplexArray, orders: tuple[int, ...]) -> list[ComplexArray]:
-    """Poles z of the envelope per order: eig(pinv(V1) V2) on the leading right singular vectors of the Hankel matrix."""
+    """Poles z of the envelope per order: eig(pinv(V1) V2) on the leading right singular vectors of the Hankel matrix.
+
+    By its singular values, not by its covariance as in `pencil`: a pair a quarter of a width apart at 60 dB is lost in the square.
+    """
     n = len(envelope)
     columns = n // 2
     hankel = np.lib.stride_tricks.sliding_window_view(envelope, columns)

@@ -41,7 +41,7 @@ BEST = 3
 class Stable:
     """Lines that hold still, each (M,) or (M, 2) of (decay, omega): value, variance of a good window, variance among windows.
 
-    held: windows that show the line over those that ought to. seen: windows.
+    held: windows that show the line over those that ought to (above 1 where neighbouring bands see it too). seen: windows.
     """
 
     value: FloatArray
