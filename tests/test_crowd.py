@@ -21,7 +21,10 @@ from qmeter.dsp.noise import white_noise
 from qmeter.dsp.subbands import Subbands
 from qmeter.estimate.chart import Ladder, Sightings, chart_of
 from qmeter.estimate.crowd import crowd_modes
+from qmeter.estimate.doubts import unsettled
 from qmeter.estimate.find import Ring
+from qmeter.estimate.leavings import MUCH, share_left
+from qmeter.estimate.modes import Mode, Spread
 from qmeter.estimate.pencil import lines_of, pencil
 from qmeter.estimate.stable import PROMINENT, Stable, _each_once, agreed, prominence, stable_lines
 
@@ -489,3 +492,44 @@ def test_the_budget_is_the_greater_of_one_window_and_their_scatter() -> None:
     greater = np.maximum(lines.single[kept, None], lines.scatter[kept]) / RATE_HZ**2
     assert_allclose(np.diagonal(modes.fit + modes.model, axis1=1, axis2=2), greater, rtol=1e-9, atol=0)
     assert_array_equal((modes.fit + modes.model)[:, 0, 1], 0.0)
+
+
+# ---- what a crowd's modes say against themselves ----
+
+
+def test_a_glide_is_left_over_and_a_straight_line_is_not() -> None:
+    """A line that glides by five half-power widths leaves most of its first time constant to the mode at its end, a straight one nothing.
+
+    The glide is a phase integral in closed form: f(t) = f1 + g exp(-a t) with g = 5 a / pi.
+    """
+    t = np.arange(FRAMES) / RATE_HZ
+    decay, hz = 30.0, 400.0
+    phase = 2 * math.pi * (hz * t + (5 * decay / math.pi) * (1 - np.exp(-decay * t)) / decay)
+    straight, glide = np.exp(-decay * t) * np.cos(2 * math.pi * hz * t), np.exp(-decay * t) * np.cos(phase)
+    assert share_left(straight, straight - straight, RATE_HZ, 0, hz, decay) == 0.0
+    assert share_left(glide, glide - straight, RATE_HZ, 0, hz, decay) > MUCH
+    assert share_left(straight[:50], straight[:50], RATE_HZ, 0, hz, decay) == 0.0  # too few to tell
+
+
+@pytest.mark.parametrize(("fit", "model", "said"), [(1.0, 3.0, True), (3.0, 1.0, False), (0.5, 1.0, False)])
+def test_a_mode_that_moves_with_the_look_says_so(fit: float, model: float, said: bool) -> None:
+    """Where windows disagree by more than their noise explains, and by more than 2 %: both figures, in per cent, and the code."""
+    decay = 50.0
+    budget = {"fit": Spread(0.0, (fit / 100 * decay) ** 2), "model": Spread(0.0, (model / 100 * decay) ** 2)}
+    mode = Mode(
+        damped_frequency_hz=400.0,
+        amplitude_decay_rate_per_s=decay,
+        amplitude=1.0,
+        budget=budget,
+        level_db=0.0,
+        level_dbfs=0.0,
+        snr_db=60.0,
+        decay_range_db=50.0,
+    )
+    doubt = unsettled(mode)
+    assert (doubt is not None) == said
+    if doubt is not None:
+        assert doubt.code == "unsettled"
+        assert "3 %" in doubt.says
+        assert "noise explains 1 %" in doubt.says
+        assert "first 30 dB" in doubt.says

@@ -19,6 +19,10 @@ TIME_CONSTANTS_WANTED = 3.0
 """of a mode that is cut off: with less than these 26 dB the decay is not known from its own fall alone"""
 CUT_DB = 10.0
 """level at the end over the noise in the mode's own band"""
+UNSETTLED_PERCENT = 2.0
+"""of the decay rate; what moves by less is no reason to tap again"""
+LOOKED_AT_DB = 30.0
+"""of a decay that the windows of a crowd look at, at most"""
 _HUM = ((50.0, 0.3), (60.0, 0.3))
 _TONES_NAMED = 4
 _TONE_WORTH_DB = -70.0
@@ -119,6 +123,29 @@ def close_pairs(modes: Sequence[Mode]) -> list[Doubt | None]:
         says = f"Two modes, {min(f[i], f[j]):.6g} and {max(f[i], f[j]):.6g} Hz, ring {apart[j]:.2g} half-power widths apart"
         said.append(Doubt("close-pair", f"{says}: each figure leans on the other. Strike or sense where one of them has a node."))
     return said
+
+
+def unsettled(mode: Mode) -> Doubt | None:
+    """Where repeated looks at a mode disagree by more than their own noise explains."""
+    fit, model = (mode.budget[name].decay_variance if name in mode.budget else 0.0 for name in ("fit", "model"))
+    apart, noise = (100.0 * math.sqrt(v) / mode.amplitude_decay_rate_per_s for v in (model, fit))
+    if not (model > fit and apart > UNSETTLED_PERCENT):
+        return None
+    return Doubt(
+        "unsettled",
+        f"It does not hold still: its decay moves by {apart:.0f} % with the start and the length of the look, of which noise explains "
+        f"{noise:.2g} %. u95 covers that. The figure stands for the first {min(mode.decay_range_db, LOOKED_AT_DB):.0f} dB of its decay.",
+    )
+
+
+def bends_early(share: float, within_s: float) -> Doubt:
+    """Of a loud mode in a crowd around which the modes leave this share of the energy at first."""
+    much = "all" if share > 0.95 else f"{100.0 * share:.0f} %"
+    return Doubt(
+        "curved-decay",
+        f"All modes together leave {much} of the energy within a quarter of this frequency unexplained in the first "
+        f"{1000.0 * within_s:.0f} ms: it glides or bends there, and the figure is that of what follows. Tap softer and compare.",
+    )
 
 
 # ---- of the recording ----

@@ -16,6 +16,7 @@ from qmeter.estimate.find import Poles, Ring, find_modes
 from qmeter.estimate.groups import rest_of
 from qmeter.estimate.half_power import ModeRing
 from qmeter.estimate.hearing import DRIVEN_CROWD, FEWEST_CROWD, GROWTH_CROWD_DB, Heard, growth_db, heard, is_driven, is_voiced, unexplained
+from qmeter.estimate.leavings import LOUD_DB, MUCH, share_left
 from qmeter.estimate.modes import DecayTrace, Doubt, Mode, Settings, Spread, Strike
 from qmeter.estimate.pool import clock_part
 from qmeter.estimate.routes import cross_checked, mode_rings
@@ -204,7 +205,7 @@ def _doubted(what: Heard, span: StrikeSpan, s: Settled, modes: list[Mode]) -> tu
     paired = doubts.close_pairs(modes)
     own: list[Mode] = []
     for i, mode in enumerate(modes):
-        said = [paired[i], doubts.filter_limited(mode, ring.low_hz, ring.high_hz)]
+        said = [paired[i], doubts.filter_limited(mode, ring.low_hz, ring.high_hz), doubts.unsettled(mode)]
         seen_s = len(ring.samples) / ring.rate
         nepers = mode.amplitude_decay_rate_per_s * seen_s
         fallen_db = _DB_PER_NEPER * nepers
@@ -215,15 +216,24 @@ def _doubted(what: Heard, span: StrikeSpan, s: Settled, modes: list[Mode]) -> tu
         elif mode.decay_range_db < doubts.FEW_DB:
             said.append(doubts.few_decibels(mode.decay_range_db))
         own.append(replace(mode, doubts=tuple(doubt for doubt in said if doubt is not None)))
-    rings = _rings(ring, s)
-    checked = cross_checked(own, rings)
+    rest = rest_of(ring, s.poles)
+    rings = _rings(ring, s, rest)
+    checked = [_bent(mode, ring, rest, s, i) for i, mode in enumerate(cross_checked(own, rings))]
     drawn = [replace(mode, trace=_trace(mode, r, s, i, what)) for i, (mode, r) in enumerate(zip(checked, rings, strict=True))]
     return tuple(drawn)
 
 
-def _rings(ring: Ring, s: Settled) -> list[ModeRing | None]:
+def _bent(mode: Mode, ring: Ring, rest: FloatArray, s: Settled, i: int) -> Mode:
+    """A loud mode of a crowd, with the doubt that it bends at first where all modes together leave much of the sound around it."""
+    if np.isfinite(s.excess[i]) or mode.level_db < -LOUD_DB or any(d.code == "curved-decay" for d in mode.doubts):
+        return mode
+    start, decay = int(s.start[i]), mode.amplitude_decay_rate_per_s
+    share = share_left(ring.samples, rest, ring.rate, start, mode.damped_frequency_hz, decay)
+    return replace(mode, doubts=(*mode.doubts, doubts.bends_early(share, 1.0 / decay))) if share > MUCH else mode
+
+
+def _rings(ring: Ring, s: Settled, rest: FloatArray) -> list[ModeRing | None]:
     hz = s.poles.pole.imag * ring.rate / (2.0 * np.pi)
-    rest = rest_of(ring, s.poles)
     return mode_rings(rest, ring.rate, s.poles.pole, s.poles.amplitude, s.start.tolist(), ring.noise.at(hz).tolist())
 
 
