@@ -20,7 +20,7 @@ from qmeter.estimate.leavings import LOUD_DB, MUCH, share_left
 from qmeter.estimate.modes import DecayTrace, Doubt, Mode, Settings, Spread, Strike
 from qmeter.estimate.pool import clock_part
 from qmeter.estimate.routes import cross_checked, mode_rings
-from qmeter.estimate.settle import SHORTEST, Settled, settle
+from qmeter.estimate.settle import SHORTEST, Settled, is_forest, settle, settle_forest
 
 _ALONE = 25.0
 """power over the local median of peaks that stand alone: a line that runs far leaves a crowd of lesser ones behind it"""
@@ -100,9 +100,10 @@ def _rung(what: Heard, span: StrikeSpan, settings: Settings) -> tuple[tuple[Mode
             left = unexplained(ring, found, contact)
             if len(found) and is_driven(what, left) and not _holds_still(ring, contact, what.noise_rms):
                 return (), doubts.driven(what.growth_db, left)
-            settled = _finite(settle(ring, found, contact))
+            forest = is_forest(found, left)
+            settled = _finite(settle_forest(ring, contact) if forest else settle(ring, found, contact))
             drifts = find_drifts(ring, settled.poles, settled.start, contact=contact, candidates=found)
-            if not drifts and _unstood(found, settled):
+            if not drifts and not forest and _unstood(found, settled):
                 found = find_modes(ring, over_local=_ALONE)
                 alone = _finite(settle(ring, found, contact))
                 drifts = find_drifts(ring, alone.poles, alone.start, contact=contact, candidates=found)

@@ -18,11 +18,10 @@ from qmeter.estimate.find import Pick, Poles, Ring, find_modes
 from qmeter.estimate.groups import GroupFit, Looks, fit_groups, joint_groups, moved, rest_of
 from qmeter.estimate.poles import IntArray
 from qmeter.estimate.profile import Profiles, profiles, spread_in_time
+from qmeter.estimate.prune import merged, swapped, unshattered
 from qmeter.estimate.resolve import resolve
 from qmeter.estimate.starts import choose_starts, first_starts, onset_shift, restarted
 
-SAME_WIDTHS = 0.15
-"""two poles closer than this many half-power widths, with like decays, are one mode found twice"""
 STEADY = 0.15
 """time constants within the whole ring below which a line is as good as a steady tone"""
 TURNS = 4
@@ -41,6 +40,7 @@ LOOSE = 2.0
 """times the usual leash that a first fit may run: a pair in antiphase looks fast at first sight"""
 REACH_WIDTHS = 4.0
 """half-power widths from a sick fit within which a crowd's modes may explain it"""
+FOREST, FOREST_LEFT = 40, 0.02
 FEW = 4
 """candidates that subtract each other well enough for one round"""
 HEALTHY = 1.8
@@ -49,7 +49,6 @@ CROWD = 4
 """so many modes above CROWDED make a crowd, to be fitted all together"""
 EARLY, LATE = 0.5, 2.5
 """time constants that a start may come after the onset: while settling, and at the end"""
-SPLINTER_WIDTHS = 2.0
 LEAST_Q = 2.0
 """below, a line is over before it has swung: a piece of the contact"""
 LEAST_ENERGY = 40.0
@@ -110,7 +109,7 @@ def settle(ring: Ring, poles: Poles, contact: int) -> Settled:
                 break
         sick, before = int(np.count_nonzero(last.excess > CROWDED)), sick
         if sick >= CROWD:
-            return _from_crowd(crowd_modes(ring, contact), ring)
+            return settle_forest(ring, contact)
         if turn and sick >= before > 0:  # another search did not help
             break
         new = _looked_again(ring, state) if turn < TURNS - 1 else Poles.none()
@@ -144,6 +143,16 @@ def _final(ring: Ring, state: _State, contact: int) -> Settled:
         if len(known) and np.max(known) < HEALTHY and len(state.poles) == len(known):
             break
     return settled
+
+
+def settle_forest(ring: Ring, contact: int) -> Settled:
+    """The modes of a ring whose candidates are so many, and explain it so badly, that fits of groups would be lost labour."""
+    return _from_crowd(crowd_modes(ring, contact), ring)
+
+
+def is_forest(candidates: Poles, left: float) -> bool:
+    """Whether it is one; `left`: share of the energy that the candidates leave. Clean rings leave less than a thousandth."""
+    return left > FOREST_LEFT and len(unshattered(candidates)) >= FOREST
 
 
 def _beside(poles: Poles, sick: Poles) -> np.ndarray:
@@ -278,45 +287,6 @@ def _looked_again(ring: Ring, state: _State) -> Poles:
         mine = np.abs(new.amplitude[i]) ** 2 / -s.real
         keep[i] = not np.any(near & (mine < 0.1 * energy))
     return new.take(keep)
-
-
-def swapped(poles: Poles, keep: np.ndarray, swaps: list[tuple[np.ndarray, Poles]]) -> Poles:
-    """The poles with whole groups replaced by what their bins ask for."""
-    keep = keep.copy()
-    fresh = Poles.none()
-    for members, new in swaps:
-        keep[members] = False
-        fresh = fresh.plus(new)
-    return poles.take(keep).plus(fresh)
-
-
-def unshattered(poles: Poles) -> Poles:
-    """Without the splinters that a rough fit leaves beside a strong line: `resolve` finds the true ones again, with evidence."""
-    energy = np.abs(poles.amplitude) ** 2 / -poles.pole.real
-    kept: list[int] = []
-    for i in np.argsort(-energy):
-        s, strong = poles.pole[i], poles.pole[kept]
-        decays = s.real / strong.real
-        like = (decays > 0.3) | (energy[i] < 0.01 * energy[kept])
-        splinter = (np.abs(s.imag - strong.imag) < SPLINTER_WIDTHS * 2.0 * -strong.real) & like & (decays < 8.0)
-        if not np.any(splinter):
-            kept.append(int(i))
-    return poles.take(np.sort(np.array(kept, dtype=int)))
-
-
-def merged(poles: Poles) -> Poles:
-    """Without the same mode twice: the stronger of two poles within `SAME_WIDTHS` stays."""
-    order = np.argsort(-(np.abs(poles.amplitude) ** 2) / -poles.pole.real)
-    kept: list[int] = []
-    for i in order:
-        s = poles.pole[i]
-        if not np.isfinite(s) or s.real >= 0:
-            continue
-        other = poles.pole[kept]
-        width = 2.0 * np.minimum(-s.real, -other.real)
-        if not np.any((np.abs(s.imag - other.imag) < SAME_WIDTHS * width) & (np.abs(np.log(s.real / other.real)) < 0.5)):
-            kept.append(int(i))
-    return poles.take(np.sort(np.array(kept, dtype=int)))
 
 
 def collect(ring: Ring, before: Poles, after: Poles, keep: np.ndarray, fits: list[GroupFit], table: Profiles) -> Settled:
