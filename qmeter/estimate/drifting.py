@@ -21,14 +21,17 @@ LEFTOVER_DB = 26.0
 
 
 def leftover(poles: Poles, drifts: tuple[Drift, ...], rate: float) -> np.ndarray:
-    """(M,) true for poles within four widths, or 1.5 times the shift, of a drifting line and far below it."""
+    """(M,) true for poles far below a drifting line, within four of its widths, 1.5 times its shift, or their own width if that is wider.
+
+    What a law of two numbers misses of the onset of a line is over soon: a fast, faint pole beside it.
+    """
     out = np.zeros(len(poles), bool)
-    hz = poles.pole.imag * rate / (2 * np.pi)
+    hz, own_width = poles.pole.imag * rate / (2 * np.pi), -poles.pole.real * rate / np.pi
     for d in drifts:
         shift = abs(d.k_frequency) * d.limit_frequency_hz
         reach = max(4.0 * d.decay_rate_per_s / np.pi, 1.5 * shift)
         low = 20 * np.log10(np.abs(poles.amplitude) / abs(d.amplitude)) < -LEFTOVER_DB
-        out |= (np.abs(hz - d.damped_frequency_hz) < reach) & low
+        out |= (np.abs(hz - d.damped_frequency_hz) < np.maximum(reach, own_width)) & low
     return out
 
 
