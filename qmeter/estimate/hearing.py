@@ -31,6 +31,8 @@ mostly grow by 1 to 25 dB and leave 0.04 or more; struck rings that grow by 1 dB
 DRIVEN_CROWD, GROWTH_CROWD_DB, FEWEST_CROWD = 0.8, 2.0, 6
 """share that the modes which hold still may leave, growth after the last contact, and how few they may be, where the first look took a
 crowded ring for speech. Clatter with a bell in it left 0.5 to 0.7, grew by 1.6 dB and gave 19 modes"""
+WELL_EXPLAINED = 0.005
+"""share that a few modes, well fitted, may leave to be a ring however they grow: two lines that beat"""
 PITCH_HZ = (60.0, 400.0)
 _ON_PITCH, _VOICED = 0.12, 0.8
 """distance from a whole multiple of the pitch, and the share of lines within it, that make a voice"""

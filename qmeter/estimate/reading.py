@@ -15,7 +15,18 @@ from qmeter.estimate.drifting import by_level, drift_mode, leftover
 from qmeter.estimate.find import Poles, Ring, find_modes
 from qmeter.estimate.groups import rest_of
 from qmeter.estimate.half_power import ModeRing
-from qmeter.estimate.hearing import DRIVEN_CROWD, FEWEST_CROWD, GROWTH_CROWD_DB, Heard, growth_db, heard, is_driven, is_voiced, unexplained
+from qmeter.estimate.hearing import (
+    DRIVEN_CROWD,
+    FEWEST_CROWD,
+    GROWTH_CROWD_DB,
+    WELL_EXPLAINED,
+    Heard,
+    growth_db,
+    heard,
+    is_driven,
+    is_voiced,
+    unexplained,
+)
 from qmeter.estimate.leavings import LOUD_DB, MUCH, share_left
 from qmeter.estimate.modes import DecayTrace, Doubt, Mode, Settings, Spread, Strike
 from qmeter.estimate.pool import clock_part
@@ -98,6 +109,10 @@ def _rung(what: Heard, span: StrikeSpan, settings: Settings) -> tuple[tuple[Mode
             found = find_modes(ring)
             # the rough fit says it of most speech, whose forest of harmonics would take long to settle
             left = unexplained(ring, found, contact)
+            if 0 < len(found) <= FEWEST_CROWD and is_driven(what, left):
+                # two lines that beat grow, too, and a rough fit of few lines is no witness against them
+                well = unexplained(ring, _finite(settle(ring, found, contact)).poles, contact)
+                left = well if well < WELL_EXPLAINED else left
             if len(found) and is_driven(what, left) and not _holds_still(ring, contact, what.noise_rms):
                 return (), doubts.driven(what.growth_db, left)
             forest = is_forest(found, left)

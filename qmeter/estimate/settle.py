@@ -99,13 +99,17 @@ def settle(ring: Ring, poles: Poles, contact: int) -> Settled:
     """Final values of the candidates `poles`; `contact` is the sample at which the contact force has ended."""
     if len(ring.samples) < SHORTEST or not len(poles):
         return _nothing()
-    state = _State.of(ring, _first_fit(ring, unshattered(poles), contact), contact)
+    candidates = unshattered(poles)
+    first = _first_fit(ring, candidates, contact)
+    # where every fit ran away (a pair in antiphase, seen as one line) the candidates themselves are what there is to resolve
+    state = _State.of(ring, first if len(first) else merged(candidates), contact)
     sick = 0
     for turn in range(TURNS):
         for _ in range(2):
             came = state.poles
             state, last = _sweep(ring, state, contact, careful=turn > 0, resolving=True)
-            if len(state.excess) and (np.max(state.excess) < HEALTHY or _hopeless(state)):
+            whole = len(state.poles) == len(came)  # a fit that was well with a pole that has been dropped is not well without it
+            if len(state.excess) and ((whole and np.max(state.excess) < HEALTHY) or _hopeless(state)):
                 break
         sick, before = int(np.count_nonzero(last.excess > CROWDED)), sick
         if sick >= CROWD:
