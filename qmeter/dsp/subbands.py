@@ -12,7 +12,7 @@ from qmeter.dsp.band import ComplexArray, FloatArray, fade
 EDGE = 0.25
 """share of a band on either side over which it fades"""
 FADED = 1.0 - 1.25 * EDGE
-"""mean square of the fade: noise in an envelope's samples is less than in the band's middle by so much"""
+"""mean square of the fade, 3/8 over each edge: noise in an envelope's samples is less than in the band's middle by so much"""
 CLEAR = 0.14
 """share on either side in which a line is too faint to be told from its neighbour's alias"""
 

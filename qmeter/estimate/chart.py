@@ -117,7 +117,7 @@ def _peaks(ring: Ring, samples: FloatArray, look_s: float) -> FloatArray:
     bins = spectrum_of(part * window, length)
     power = bins.real**2 + bins.imag**2
     share = float(np.mean(window**2))
-    floor = floor_of(power, ring, length, hann=share * _PEAK_OVER_NOISE / 25.0, over_local=_PEAK_OVER_LOCAL, block=96)
+    floor = floor_of(power, ring, length, hann=share, over_local=_PEAK_OVER_LOCAL, over_noise=_PEAK_OVER_NOISE, block=96)
     step = ring.rate / length
     low, high = max(int(ring.low_hz / step), 2), min(int(ring.high_hz / step) + 1, len(power) - 2)
     if high - low < 2:

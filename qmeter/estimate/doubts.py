@@ -22,7 +22,7 @@ CUT_DB = 10.0
 UNSETTLED_PERCENT = 2.0
 """of the decay rate; what moves by less is no reason to tap again"""
 LOOKED_AT_DB = 30.0
-"""of a decay that the windows of a crowd look at, at most"""
+"""of a decay: what a window hears of a line after that holds a thousandth of its energy"""
 _HUM = ((50.0, 0.3), (60.0, 0.3))
 _TONES_NAMED = 4
 _TONE_WORTH_DB = -70.0

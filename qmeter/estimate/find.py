@@ -112,14 +112,16 @@ class Floor:
         return np.asarray(np.exp(np.interp(bins, self.centre, self.log_power)))
 
 
-def floor_of(power: FloatArray, ring: Ring, length: int, *, hann: float, over_local: float, block: int = 48) -> Floor:
-    """`_PEAK_OVER_NOISE` times the noise, or `over_local` times the local median of the spectrum itself where that is more."""
+def floor_of(
+    power: FloatArray, ring: Ring, length: int, *, hann: float, over_local: float, over_noise: float = _PEAK_OVER_NOISE, block: int = 48
+) -> Floor:
+    """`over_noise` times the noise, or `over_local` times the local median of the spectrum itself where that is more."""
     bins = len(power)
     blocks = max(bins // block, 1)
     used = blocks * block if bins >= block else bins
     medians = np.median(power[:used].reshape(blocks, -1), axis=1) * (_MEDIAN_TO_MEAN * over_local)
     centre = (np.arange(blocks) + 0.5) * (used / blocks)
-    known = ring.noise.at(np.maximum(centre, 0.5) * ring.rate / length) * (length * ring.rate / 2 * hann * _PEAK_OVER_NOISE)
+    known = ring.noise.at(np.maximum(centre, 0.5) * ring.rate / length) * (length * ring.rate / 2 * hann * over_noise)
     log_power = np.log(np.maximum(np.maximum(medians, known), 1e-300))
     return Floor(np.asarray(centre, dtype=np.float64), np.asarray(log_power, dtype=np.float64))
 

@@ -109,14 +109,16 @@ def _rung(what: Heard, span: StrikeSpan, settings: Settings) -> tuple[tuple[Mode
             found = find_modes(ring)
             # the rough fit says it of most speech, whose forest of harmonics would take long to settle
             left = unexplained(ring, found, contact)
-            if 0 < len(found) <= FEWEST_CROWD and is_driven(what, left):
+            forest, driven = is_forest(found, left), len(found) > 0 and is_driven(what, left)
+            settled = None
+            if driven and len(found) <= FEWEST_CROWD:
                 # two lines that beat grow, too, and a rough fit of few lines is no witness against them
-                well = unexplained(ring, _finite(settle(ring, found, contact)).poles, contact)
-                left = well if well < WELL_EXPLAINED else left
-            if len(found) and is_driven(what, left) and not _holds_still(ring, contact, what.noise_rms):
+                settled = _finite(settle(ring, found, contact))
+                driven = unexplained(ring, settled.poles, contact) >= WELL_EXPLAINED
+            if driven and not _holds_still(ring, contact, what.noise_rms):
                 return (), doubts.driven(what.growth_db, left)
-            forest = is_forest(found, left)
-            settled = _finite(settle_forest(ring, contact) if forest else settle(ring, found, contact))
+            if settled is None:
+                settled = _finite(settle_forest(ring, contact) if forest else settle(ring, found, contact))
             drifts = find_drifts(ring, settled.poles, settled.start, contact=contact, candidates=found)
             if not drifts and not forest and _unstood(found, settled):
                 found = find_modes(ring, over_local=_ALONE)

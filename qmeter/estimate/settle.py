@@ -41,12 +41,13 @@ LOOSE = 2.0
 REACH_WIDTHS = 4.0
 """half-power widths from a sick fit within which a crowd's modes may explain it"""
 FOREST, FOREST_LEFT = 40, 0.02
+"""candidates, and the share of the energy that they leave, of a ring that goes to the windows at once"""
 FEW = 4
 """candidates that subtract each other well enough for one round"""
 HEALTHY = 1.8
 """chi2 over its expectation below which a group has nothing left to explain"""
 CROWD = 4
-"""so many modes above CROWDED make a crowd, to be fitted all together"""
+"""so many modes above CROWDED make a crowd, to be read through windows"""
 EARLY, LATE = 0.5, 2.5
 """time constants that a start may come after the onset: while settling, and at the end"""
 LEAST_Q = 2.0
@@ -61,7 +62,7 @@ class Settled:
 
     covariance: (M, 2, 2) of (alpha, omega) per sample, against the residual's spread in time and local level. fisher: the same for
     stationary noise of the measured spectrum. start: (M,) samples; length: (M,); excess: (M,) chi2 over its expectation.
-    group: (M,) number of the joint group. model: (M, 2, 2), what repeated fits from other starts and lengths disagree by.
+    group: (M,) number of the joint group. model: (M, 2, 2), what the windows of a crowd disagree by.
     """
 
     poles: Poles

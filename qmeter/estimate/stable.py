@@ -23,6 +23,7 @@ LEAST_WINDOWS = 4
 HEAVIEST = 0.12
 """share of the total weight that one window may have"""
 OUTLIER = 3.0
+"""times the scatter beyond which a window is left out"""
 HELD = 0.45
 """share of the windows in which a line ought to show that it must be seen in"""
 ACCEPT = ((8, 0.2), (14, 0.3))
@@ -31,6 +32,7 @@ PROMINENT = 6.0
 """power of a line's peak over the median of the spectrum around it, over three time constants; what a knock or a cymbal's hiss makes up
 mostly lies below"""
 AROUND_WIDTHS, AROUND_BINS = 30.0, 24.0
+"""half-power widths, and bins at least, either side of a line that are its surroundings"""
 LOUDER = 10.0
 """in energy: a loud wide mode and a faint narrow one may share a place"""
 BEST = 3
